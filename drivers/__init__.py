@@ -1,0 +1,1 @@
+"""What an instrument is: protocols, typed errors, the bench's settings, and time."""
