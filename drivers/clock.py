@@ -10,6 +10,7 @@ from __future__ import annotations
 
 import asyncio
 import contextvars
+import heapq
 import itertools
 import time
 from asyncio import base_events, events
@@ -55,6 +56,7 @@ class RealClock:
 class _Timer(asyncio.TimerHandle):
     """A timer that breaks ties by age: asyncio's own heap does not."""
 
+    __slots__ = ("_order",)
     _order: int
 
     def __lt__(self, other: object) -> bool:
@@ -101,10 +103,12 @@ class VirtualLoop(base_events.BaseEventLoop):
         *args: Any,
         context: contextvars.Context | None = None,
     ) -> asyncio.TimerHandle:
-        handle = super().call_at(when, callback, *args, context=context)
-        handle.__class__ = _Timer
-        cast(_Timer, handle)._order = next(self._orders)
-        return handle
+        self._check_closed()  # type: ignore[attr-defined]
+        timer = _Timer(when, callback, args, self, context)
+        timer._order = next(self._orders)
+        heapq.heappush(self._scheduled, timer)  # type: ignore[attr-defined]
+        cast(Any, timer)._scheduled = True
+        return timer
 
     def _process_events(self, event_list: list[Any]) -> None:
         """There are never any: nothing outside can speak to this loop."""

@@ -1,1 +1,5 @@
-"""An independent world to judge the daemon by. Its physics shares no formula with analysis."""
+"""An independent world: lamp, optics, mechanics and counter with physics of their own.
+
+Nothing here imports the analysis: a wrong formula there must not be able to hide behind
+the same formula here.
+"""

@@ -1,0 +1,212 @@
+"""The shape of one line: a Voigt profile seen through two slits, with exact derivatives.
+
+Theory of operation. The Voigt profile is the real part of an analytic function of z = x + i gamma,
+
+    f(z) = w(z / (sigma sqrt 2)) / (sigma sqrt(2 pi)),      V = Re f       (Faddeeva function w)
+
+so every derivative and antiderivative in x of V is the real part of one "level" of f, and
+
+    dV/dgamma = -Im f',      dV/dsigma = sigma Re f''        (Cauchy-Riemann; heat equation).
+
+A convolution with a box of full width b is a difference of the next antiderivative at x + b/2 and x - b/2,
+with two boxes (entrance and exit slit: a trapezoid) a second difference of the second antiderivative. The
+levels stand in a table over x/sigma (spacing growing with distance) and are read by quintic Hermite
+interpolation; about 5e-9 of the peak, 20 times cheaper than quadrature over the slits at every point. The
+difference cancels where a box is narrow against sigma: there four Gauss-Legendre nodes replace it.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from analysis.counting import FloatArray
+
+ComplexArray = NDArray[np.complex128]
+
+FWHM_PER_SIGMA = 2.0 * np.sqrt(2.0 * np.log(2.0))
+NARROW = 0.6
+"""A box narrower than this many sigma is integrated by nodes: their error is then below 2e-9."""
+_STEP = 0.05
+_LORENTZ_AS_SIGMA = 2.0 / FWHM_PER_SIGMA
+
+
+def voigt_fwhm(sigma: float, gamma: float) -> float:
+    """FWHM of a Voigt profile; accurate to 0.02 % (Olivero and Longbothum 1977, JQSRT 17, 233, eq. 1.3)."""
+    lorentz, gauss = 2.0 * gamma, FWHM_PER_SIGMA * sigma
+    return float(0.5346 * lorentz + np.sqrt(0.2166 * lorentz**2 + gauss**2))
+
+
+@dataclass(frozen=True, slots=True)
+class Kernel:
+    """The known part of the instrument: a weighted sum of shifted antiderivatives of the line.
+
+    offsets_nm, weights : (K,) the line seen through the slits is sum_k weights[k] f^(-order)(x + offsets[k]).
+    order : 0, 1 or 2 boxes taken as differences; the rest as nodes. variance_nm2 : of the boxes alone.
+    """
+
+    offsets_nm: FloatArray
+    weights: FloatArray
+    order: int
+    variance_nm2: float
+
+
+def box_kernel(*, box_widths_nm: tuple[float, float], sigma_nm: float) -> Kernel:
+    """Kernel of two boxes (full widths, nm; 0.0 is absent) for this sigma. ValueError if negative."""
+    if min(box_widths_nm) < 0.0 or not sigma_nm > 0.0:
+        raise ValueError(f"box widths must be >= 0 and sigma > 0, got {box_widths_nm} and {sigma_nm}")
+    offsets, weights, order = np.zeros(1), np.ones(1), 0
+    for width in box_widths_nm:
+        if width == 0.0:
+            continue
+        if width < NARROW * sigma_nm:
+            places, shares = 0.5 * width * _NODES, 0.5 * _NODE_WEIGHTS
+        else:
+            places, shares = np.array([-0.5, 0.5]) * width, np.array([-1.0, 1.0]) / width
+            order += 1
+        offsets = (offsets[:, None] + places).ravel()
+        weights = (weights[:, None] * shares).ravel()
+    return Kernel(offsets, weights, order, sum(width**2 for width in box_widths_nm) / 12.0)
+
+
+_NODES, _NODE_WEIGHTS = np.polynomial.legendre.leggauss(4)
+
+
+@dataclass(frozen=True, slots=True)
+class Profile:
+    """Area-normalised profile and its derivatives at the given offsets, each of their shape; 1/nm, 1/nm^2."""
+
+    value: FloatArray
+    d_offset: FloatArray
+    d_sigma: FloatArray
+    d_gamma: FloatArray
+
+
+def line_profile(
+    offset_nm: FloatArray, *, sigma_nm: float, gamma_nm: float, box_widths_nm: tuple[float, float]
+) -> Profile:
+    """Voigt profile (sigma > 0, gamma >= 0: half width of the Lorentz part) seen through two boxes.
+
+    offset_nm : position minus line centre, any shape, nm.
+    """
+    if not sigma_nm > 0.0 or gamma_nm < 0.0:
+        raise ValueError(f"sigma must be > 0 and gamma >= 0, got {sigma_nm} and {gamma_nm}")
+    kernel = box_kernel(box_widths_nm=box_widths_nm, sigma_nm=sigma_nm)
+    points = np.asarray(offset_nm, dtype=np.float64)[..., None] + kernel.offsets_nm
+    plain, first, second = _levels(points / sigma_nm, gamma_nm / sigma_nm, kernel.order)
+    # in units of sigma every level down is one more power of it; the antiderivatives bring it back
+    scale = sigma_nm**kernel.order / sigma_nm
+    value = scale * (plain.real @ kernel.weights)
+    slope = scale / sigma_nm * (first @ kernel.weights.astype(np.complex128))
+    curve = scale / sigma_nm * (second.real @ kernel.weights)
+    return Profile(value, slope.real, curve, -slope.imag)
+
+
+def observed_fwhm(*, sigma_nm: float, gamma_nm: float, box_widths_nm: tuple[float, float]) -> float:
+    """FWHM of the profile seen through the boxes, by bisection to 1e-9 of it (symmetric, single-peaked)."""
+
+    def value(x: float) -> float:
+        at = np.array([x])
+        made = line_profile(at, sigma_nm=sigma_nm, gamma_nm=gamma_nm, box_widths_nm=box_widths_nm)
+        return float(made.value[0])
+
+    half = 0.5 * value(0.0)
+    low, high = 0.0, voigt_fwhm(sigma_nm, gamma_nm) + sum(box_widths_nm)
+    while high - low > 1e-9 * high:
+        middle = 0.5 * (low + high)
+        low, high = (middle, high) if value(middle) > half else (low, middle)
+    return low + high
+
+
+def mode_width(*, sigma_nm: float, gamma_nm: float, box_widths_nm: tuple[float, float]) -> float:
+    """Width s of the shape modes: s^2 = sigma^2 + boxes' variance + (the Gaussian sigma of FWHM 2 gamma)^2.
+
+    An approximation: a Lorentz part has no variance. The modes stand for what is unknown anyway.
+    """
+    boxes = sum(width**2 for width in box_widths_nm) / 12.0
+    return float(np.sqrt(sigma_nm**2 + boxes + (_LORENTZ_AS_SIGMA * gamma_nm) ** 2))
+
+
+@dataclass(frozen=True, slots=True)
+class ShapeModes:
+    """Skewness and kurtosis modes: (2, ...) values, derivatives in the offset and in s; 1/nm and 1/nm^2."""
+
+    value: FloatArray
+    d_offset: FloatArray
+    d_width: FloatArray
+
+
+def shape_modes(offset_nm: FloatArray, *, width_nm: float) -> ShapeModes:
+    """Gauss-Hermite functions He3(u) e^(-u^2/2) and He4(u) e^(-u^2/2), u = offset/width, of no area.
+
+    Scaled so that a coefficient of 1 is as high as the peak of a Gaussian of the same width: a coefficient
+    of 0.01 is a shape error of 1 % of the peak. They are correlated over the whole line, which is what
+    distinguishes a wrong shape from noise: more light does not average it away.
+    """
+    u = np.asarray(offset_nm, dtype=np.float64) / width_nm
+    bell = np.exp(-0.5 * u * u) / (width_nm * np.sqrt(2.0 * np.pi))
+    third, fourth, fifth = u * (u * u - 3.0), u**4 - 6.0 * u * u + 3.0, u**5 - 10.0 * u**3 + 15.0 * u
+    value = np.stack([third * bell / _PEAK_3, fourth * bell / _PEAK_4])
+    # d/du of He_n e^(-u^2/2) is -He_(n+1) e^(-u^2/2)
+    d_u = -np.stack([fourth * bell / _PEAK_3, fifth * bell / _PEAK_4])
+    return ShapeModes(value, d_u / width_nm, -(value + u * d_u) / width_nm)
+
+
+# max of |He3| e^(-u^2/2) is at u^2 = 3 - sqrt 6, where He4 vanishes; of |He4| at u = 0
+_U3 = np.sqrt(3.0 - np.sqrt(6.0))
+_PEAK_3 = _U3 * (3.0 - _U3**2) * np.exp(-0.5 * _U3**2)
+_PEAK_4 = 3.0
+
+
+def _levels(x: FloatArray, gamma: float, order: int) -> tuple[ComplexArray, ComplexArray, ComplexArray]:
+    """Levels -order, 1-order and 2-order of f at x (any shape), everything in units of sigma."""
+    distance = np.abs(x)
+    top = float(np.arcsinh(distance.max(initial=0.0)))
+    grid = np.sinh(_STEP * np.arange(int(top / _STEP) + 2))
+    table = _table(grid, gamma, order)
+    cell = np.minimum((np.arcsinh(distance) / _STEP).astype(np.int64), grid.size - 2)
+    width = (grid[1:] - grid[:-1])[cell]
+    s = (distance - grid[cell]) / width
+    low, high = table[cell], table[cell + 1]
+    s3 = s * s * s
+    r = 1.0 - s
+    r3 = r * r * r
+    basis = (
+        r3 * (1.0 + 3.0 * s + 6.0 * s * s),
+        width * r3 * s * (1.0 + 3.0 * s),
+        0.5 * width * width * r3 * s * s,
+        s3 * (1.0 + 3.0 * r + 6.0 * r * r),
+        -width * s3 * r * (1.0 + 3.0 * r),
+        0.5 * width * width * s3 * r * r,
+    )
+    out = []
+    for k in range(3):
+        read = basis[0] * low[..., k] + basis[1] * low[..., k + 1] + basis[2] * low[..., k + 2]
+        read += basis[3] * high[..., k] + basis[4] * high[..., k + 1] + basis[5] * high[..., k + 2]
+        # f(-x) is the conjugate of f(x), and each level changes the sign once more
+        mirror = -np.conj(read) if (k - order) % 2 else np.conj(read)
+        out.append(np.where(x < 0.0, mirror, read))
+    return out[0], out[1], out[2]
+
+
+def _table(grid: FloatArray, gamma: float, order: int) -> ComplexArray:
+    """(M, 5) levels -order..4-order of f on the grid. Antiderivatives start at 0 with the value 0."""
+    from scipy.special import wofz
+
+    root2 = np.sqrt(2.0)
+    z = (grid + 1j * gamma) / root2
+    w = [wofz(z)]
+    w.append(-2.0 * z * w[0] + 2j / np.sqrt(np.pi))
+    for n in range(2, 5):
+        w.append(-2.0 * z * w[n - 1] - 2.0 * (n - 1) * w[n - 2])
+    levels = [w[n] / (np.sqrt(2.0 * np.pi) * root2**n) for n in range(5)]
+    h = np.diff(grid)
+    for _ in range(order):
+        # exact integral of the quintic Hermite interpolant of the level, from its two derivatives
+        f, d1, d2 = levels[0], levels[1], levels[2]
+        piece = h / 2.0 * (f[:-1] + f[1:]) + h**2 / 10.0 * (d1[:-1] - d1[1:])
+        piece += h**3 / 120.0 * (d2[:-1] + d2[1:])
+        levels.insert(0, np.concatenate([np.zeros(1, dtype=np.complex128), np.cumsum(piece)]))
+    return np.stack(levels[:5], axis=-1)

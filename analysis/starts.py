@@ -1,0 +1,220 @@
+"""Cold fits: where a fit starts is found from the data alone, never from an earlier answer.
+
+Over a grid of places (a quarter of the expected FWHM apart) and a few widths the areas and the background
+follow by linear least squares from one Gram matrix; the best few different places are polished by `fit`.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from analysis.counting import FloatArray
+from analysis.fit import FitResult, fit
+from analysis.model import FeatureModel, LinearBackground, neutral
+from analysis.profile import FWHM_PER_SIGMA, line_profile
+
+MOST_PLACES = 40
+_ROUGH_STEPS = 8
+
+
+@dataclass(frozen=True, slots=True)
+class Bounds:
+    """What a pair may be: ratio of the second line to the main one, distance in absolute value, nm."""
+
+    lowest_ratio: float
+    highest_ratio: float
+    smallest_separation_nm: float
+
+
+def fit_single(model: FeatureModel) -> FitResult:
+    """The best single line. ValueError if the model is not of one line with the built-in background."""
+    starts = [start for width in _widths(model) for start in _single_starts(model, width)[:2]]
+    return _polish(model, starts, [(model.lower, model.upper)] * len(starts))
+
+
+def fit_pair(model: FeatureModel, single: FitResult, *, within: Bounds | None = None) -> FitResult:
+    """The best pair; `single` (of the same data) lends its widths. within: bounds of a composite rival."""
+    widths = [*_widths(model), (0.9 * single.value("sigma_nm"), _gamma(single))]
+    starts: list[FloatArray] = []
+    limits: list[tuple[FloatArray, FloatArray]] = []
+    for width in widths:
+        for start in _pair_starts(model, width, within, most=3):
+            starts.append(start)
+            limits.append(_limits(model, start, within))
+    return _polish(model, starts, limits)
+
+
+def _gamma(made: FitResult) -> float:
+    return made.value("gamma_nm") if "gamma_nm" in made.names else 0.0
+
+
+def _widths(model: FeatureModel) -> list[tuple[float, float]]:
+    """(sigma, gamma) worth starting from: as expected, and with the whole line 1.4 times as broad."""
+    base = neutral(model)
+    sigma, gamma = model.value(base, "sigma_nm"), model.value(base, "gamma_nm")
+    return [(sigma, gamma), (float(np.hypot(sigma, model.feature.fwhm_nm / FWHM_PER_SIGMA)), gamma)]
+
+
+def _limits(model: FeatureModel, start: FloatArray, within: Bounds | None) -> tuple[FloatArray, FloatArray]:
+    low, high = model.lower.copy(), model.upper.copy()
+    if within is not None:
+        ratio, separation = model.index["ratio"], model.index["separation_nm"]
+        low[ratio], high[ratio] = within.lowest_ratio, within.highest_ratio
+        if start[separation] > 0.0:
+            low[separation] = within.smallest_separation_nm
+        else:
+            high[separation] = -within.smallest_separation_nm
+    return low, high
+
+
+def _polish(
+    model: FeatureModel, starts: list[FloatArray], limits: list[tuple[FloatArray, FloatArray]]
+) -> FitResult:
+    rough = [
+        fit(model, start, lower=low, upper=high, tolerance=1e-2, iterations=_ROUGH_STEPS)
+        for start, (low, high) in zip(starts, limits, strict=True)
+    ]
+    best = sorted(range(len(rough)), key=lambda k: -rough[k].log_likelihood)
+    finals = []
+    for k in best[:2]:
+        # the runner-up is finished only where it could still win
+        if finals and rough[k].log_likelihood < finals[0].log_likelihood - 3.0:
+            break
+        finals.append(
+            fit(model, rough[k].values, lower=limits[k][0], upper=limits[k][1], tolerance=1e-6)
+        )
+    return max(finals, key=lambda made: made.log_likelihood)
+
+
+@dataclass(frozen=True, slots=True)
+class _Gram:
+    """Normal equations over a dictionary of columns: M places, K known lines for each, the background."""
+
+    places: FloatArray
+    matrix: FloatArray
+    target: FloatArray
+    known: NDArray[np.int64]
+    base: NDArray[np.int64]
+
+    def solve(self, columns: NDArray[np.int64], tied: FloatArray | None = None) -> tuple[FloatArray, FloatArray]:
+        """Solutions (S, C) and reductions of chi square (S,) for S choices of C columns.
+
+        tied : the second column is added to the first with this factor (scalar array) and dropped.
+        """
+        matrix = self.matrix[columns[:, :, None], columns[:, None, :]]
+        target = self.target[columns]
+        if tied is not None:
+            factor = float(tied)
+            mix = np.eye(columns.shape[1])
+            mix[1, 0] = factor
+            mix = np.delete(mix, 1, axis=1)
+            matrix = mix.T @ matrix @ mix
+            target = target @ mix
+        size = np.einsum("sii->si", matrix)
+        matrix = matrix + np.eye(matrix.shape[1]) * (1e-9 * size[:, :, None] + 1e-300)
+        made = np.linalg.solve(matrix, target[:, :, None])[:, :, 0]
+        return made, np.sum(made * target, axis=1)
+
+
+def _gram(model: FeatureModel, width: tuple[float, float]) -> _Gram:
+    feature, x = model.feature, model.x
+    if not isinstance(model.background, LinearBackground):
+        raise ValueError("a fit with a background of its own needs its own start: use analysis.fit.fit")
+    span = x[-1] - x[0]
+    number = int(np.clip(np.ceil(4.0 * span / feature.fwhm_nm) + 1, 9, MOST_PLACES))
+    places = np.linspace(x[0], x[-1], number)
+    known = np.asarray(feature.known_lines_nm) - feature.wavelength_nm
+    centres = np.concatenate([places, (places[:, None] + known).ravel()])
+    live = model.live_s(neutral(model))
+    lines = line_profile(
+        x - centres[:, None],
+        sigma_nm=width[0],
+        gamma_nm=width[1],
+        box_widths_nm=feature.box_widths_nm,
+    ).value
+    _, base = model.background.evaluate(x, np.zeros(len(model.background.names)))
+    columns = np.vstack([lines, base.T]) * live
+    sigma = np.sqrt(np.maximum(model.observed, 1.0)) if model.sigma is None else model.sigma
+    scaled = columns / sigma
+    first = number * (1 + known.size)
+    return _Gram(
+        places=places,
+        matrix=scaled @ scaled.T,
+        target=scaled @ (model.observed / sigma),
+        known=number + np.arange(number * known.size).reshape(number, known.size),
+        base=first + np.arange(base.shape[1]),
+    )
+
+
+def _single_starts(model: FeatureModel, width: tuple[float, float]) -> list[FloatArray]:
+    gram = _gram(model, width)
+    main = np.arange(gram.places.size)
+    columns = np.column_stack([main, gram.known, np.tile(gram.base, (main.size, 1))])
+    solution, gain = gram.solve(columns)
+    gain = np.where(solution[:, 0] > 0.0, gain, -np.inf)
+    order = np.argsort(-gain, kind="stable")
+    return [_assemble(model, width, gram.places[k], None, solution[k]) for k in order[:4]]
+
+
+def _pair_starts(
+    model: FeatureModel, width: tuple[float, float], within: Bounds | None, *, most: int
+) -> list[FloatArray]:
+    gram = _gram(model, width)
+    main, second = (part.ravel() for part in np.meshgrid(np.arange(gram.places.size), np.arange(gram.places.size)))
+    smallest = 0.0 if within is None else within.smallest_separation_nm
+    apart = np.abs(gram.places[main] - gram.places[second])
+    keep = (main != second) & (apart >= smallest - 0.5 * (gram.places[1] - gram.places[0]))
+    main, second = main[keep], second[keep]
+    columns = np.column_stack([main, second, gram.known[main], np.tile(gram.base, (main.size, 1))])
+    solution, gain = gram.solve(columns)
+    ratio = solution[:, 1] / np.where(solution[:, 0] > 0.0, solution[:, 0], np.inf)
+    low, high = (0.0, 1.0) if within is None else (within.lowest_ratio, within.highest_ratio)
+    gain = np.where((solution[:, 0] > 0.0) & (ratio >= low) & (ratio <= high), gain, -np.inf)
+    if within is not None:
+        for factor in (low, high):
+            tied, tied_gain = gram.solve(columns, np.array(factor))
+            better = (tied_gain > gain) & (tied[:, 0] > 0.0)
+            gain = np.where(better, tied_gain, gain)
+            spread = np.column_stack([tied[:, 0], factor * tied[:, 0], tied[:, 1:]])
+            solution = np.where(better[:, None], spread, solution)
+    chosen: list[int] = []
+    for k in np.argsort(-gain, kind="stable"):
+        if len(chosen) == most or not np.isfinite(gain[k]):
+            break
+        if all(max(abs(main[k] - main[c]), abs(second[k] - second[c])) > 1 for c in chosen):
+            chosen.append(int(k))
+    return [
+        _assemble(model, width, gram.places[main[k]], gram.places[second[k]], solution[k]) for k in chosen
+    ]
+
+
+def _assemble(
+    model: FeatureModel, width: tuple[float, float], main: float, second: float | None, solution: FloatArray
+) -> FloatArray:
+    made, index = neutral(model), model.index
+    made[index["area"]] = solution[0]
+    made[index["centre_nm"]] = main
+    made[index["sigma_nm"]] = width[0]
+    if "gamma_nm" in index:
+        made[index["gamma_nm"]] = width[1]
+    rest = solution[1:]
+    if second is not None:
+        made[index["separation_nm"]] = second - main
+        made[index["ratio"]] = solution[1] / solution[0]
+        if "sigma2_nm" in index:
+            made[index["sigma2_nm"]] = width[0]
+        rest = solution[2:]
+    known = len(model.feature.known_lines_nm)
+    if known:
+        made[index["known_1_area"] : index["known_1_area"] + known] = np.maximum(rest[:known], 0.0)
+    assert model.background is not None
+    first = index[model.background.names[0]]
+    level = rest[known:]
+    if model.sigma is None:
+        # never start at zero: a background that a few counts will need must be able to grow
+        level = np.maximum(level, 0.01 * model.observed.sum() / model.gate.sum())
+    made[first : first + level.size] = level
+    return np.clip(made, model.lower, model.upper)

@@ -1,0 +1,154 @@
+"""Carrying one run from wherever its journal stands to its file: the same way for a new and a resumed one."""
+
+from __future__ import annotations
+
+import asyncio
+import contextlib
+import json
+import logging
+import sys
+from collections.abc import Callable
+from pathlib import Path
+from typing import Any
+
+from daq.hands import Devices, Grip, Hands
+from daq.journal import Journal
+from daq.looks import InlineLooker, Looker, ProcessLooker
+from daq.machine import Machine
+from daq.records import StopReason
+from daq.runner import Notice, Runner
+from daq.summary import conclusion
+from drivers.clock import Clock
+from drivers.errors import GratingdError
+
+log = logging.getLogger(__name__)
+
+SHORTEST_SNAPSHOT_PAUSE_S = 5.0
+SNAPSHOT_PAUSE_RATIO = 20.0
+"""A live snapshot of the file may cost at most a twentieth of the time."""
+
+Observer = Callable[[Notice], None]
+
+
+class ExportFailed(GratingdError):
+    """The journal is whole, but its file could not be made."""
+
+
+class Stopper:
+    """Where a stop is asked for, by Ctrl-C, a signal or a timer; it reaches the run in progress and the night."""
+
+    def __init__(self) -> None:
+        self.reason: StopReason | None = None
+        self._runner: Runner | None = None
+
+    def stop(self, reason: StopReason, source: str) -> None:
+        if self.reason is None:
+            self.reason = reason
+        if self._runner is not None:
+            self._runner.wish("stop", reason=reason, source=source)
+
+    def attend(self, runner: Runner | None) -> None:
+        """From now on stops go to this runner."""
+        self._runner = runner
+        if runner is not None and self.reason is not None:
+            runner.wish("stop", reason=self.reason, source="night")
+
+
+def journal_path_of(out: Path, run_id: str) -> Path:
+    return out / f"{run_id}.journal"
+
+
+async def carry_run(
+    head: dict[str, Any],
+    journal: Journal,
+    machine: Machine,
+    *,
+    devices: Devices | None,
+    clock: Clock,
+    session: int,
+    reason: str,
+    observe: Observer,
+    stopper: Stopper,
+) -> dict[str, Any]:
+    """One session of one run, to its conclusion and its file; returns its summary. Closes the journal.
+
+    Raises RunFailed or JournalError when the run broke off (the journal can be recovered), ExportFailed when
+    only the file could not be made.
+    """
+    looker: Looker = InlineLooker(head) if clock.is_virtual else ProcessLooker(head)
+    hands = None if devices is None else Hands(devices, Grip(**head["plan"]["grip"]), clock)
+    runner = Runner(
+        journal=journal,
+        machine=machine,
+        hands=hands,
+        looker=looker,
+        conclude=lambda machine, look: conclusion(head, machine, look),
+        clock=clock,
+        observe=observe,
+    )
+    out = journal.path.with_suffix(".h5")
+    snapshots = None if clock.is_virtual else asyncio.create_task(_snapshots(journal.path, out))
+    stopper.attend(runner)
+    try:
+        await runner.run(session=session, reason=reason)
+    finally:
+        stopper.attend(None)
+        if snapshots is not None:
+            snapshots.cancel()
+            with contextlib.suppress(asyncio.CancelledError):
+                await snapshots
+        await looker.close()
+        journal.close()
+    await export_run(journal.path, out, clock)
+    assert machine.conclusion is not None, "the runner returns after the conclusion only"
+    return machine.conclusion["summary"] | {"file": str(out.absolute())}
+
+
+async def export_run(journal_path: Path, out: Path, clock: Clock) -> None:
+    """The file of a journal: a plain call under virtual time, a child process otherwise."""
+    if clock.is_virtual:
+        from daq.export import export
+
+        export(journal_path, out)
+        return
+    problem = await _export_in_child(journal_path, out)
+    if problem is not None:
+        raise ExportFailed(
+            f"{journal_path}: its file could not be made: {problem}; "
+            f"mend that and run: gratingd recover {journal_path.parent}"
+        )
+
+
+async def _export_in_child(journal_path: Path, out: Path) -> str | None:
+    child = await asyncio.create_subprocess_exec(
+        *(sys.executable, "-P", "-m", "daq.export", str(journal_path), str(out)),
+        stdin=asyncio.subprocess.DEVNULL,
+        stdout=asyncio.subprocess.PIPE,
+        stderr=asyncio.subprocess.PIPE,
+        start_new_session=True,  # Ctrl-C ends the run cleanly; its file is made all the same
+    )
+    try:
+        printed, complained = await child.communicate()
+    except asyncio.CancelledError:
+        with contextlib.suppress(ProcessLookupError):
+            child.kill()
+        await child.wait()
+        raise
+    if child.returncode == 0:
+        return None
+    with contextlib.suppress(ValueError, KeyError, TypeError):
+        return str(json.loads(printed)["error"])
+    return complained.decode(errors="replace").strip() or f"the export ended with code {child.returncode}"
+
+
+async def _snapshots(journal_path: Path, out: Path) -> None:
+    """The file so far, now and then, for whoever looks in meanwhile."""
+    loop = asyncio.get_running_loop()
+    pause_s = SHORTEST_SNAPSHOT_PAUSE_S
+    while True:
+        await asyncio.sleep(pause_s)
+        started_s = loop.time()
+        problem = await _export_in_child(journal_path, out)
+        if problem is not None:
+            log.warning("no live snapshot: %s", problem)
+        pause_s = max(SHORTEST_SNAPSHOT_PAUSE_S, SNAPSHOT_PAUSE_RATIO * (loop.time() - started_s))

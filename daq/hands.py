@@ -1,0 +1,237 @@
+"""The hands: the only code that awaits drivers. One call, one record.
+
+Every public coroutine here is one action of the run machine and returns the record that ends it, as
+`(kind, body)`; device errors pass through to the runner, which makes fault records of them. `arm` is called
+before an action is started, `end_dwell` and `halt` may come at any time while it runs.
+"""
+
+from __future__ import annotations
+
+import asyncio
+from collections.abc import Awaitable
+from dataclasses import asdict, dataclass
+from typing import Any
+
+from analysis.allocate import Visit
+from daq.records import Kind
+from drivers.clock import Clock
+from drivers.errors import DeviceError, Halted, HardwareFault, LinkError, OverLight
+from drivers.protocols import Ambient, Detector, Device, GratingDrive, Shutter
+
+HIGHEST_DEAD_TIME_FRACTION = 0.3
+"""Counts times dead time over gate time: above it the correction is no longer trusted and the point is flagged
+(common practice)."""
+
+Ending = tuple[str, dict[str, Any]]
+
+
+@dataclass(frozen=True, slots=True)
+class Devices:
+    """What a bench file names, opened."""
+
+    drive: GratingDrive
+    detector: Detector
+    shutter: Shutter
+    ambient: Ambient | None
+
+    def by_role(self) -> dict[str, Device]:
+        every = {"drive": self.drive, "detector": self.detector, "shutter": self.shutter}
+        return every | ({"ambient": self.ambient} if self.ambient is not None else {})
+
+    async def close(self) -> list[str]:
+        """Release every link; what went wrong is returned, never raised."""
+        problems = []
+        for role, device in self.by_role().items():
+            try:
+                await device.close()
+            except Exception as error:
+                problems.append(f"{role}: {error}")
+        return problems
+
+
+@dataclass(frozen=True, slots=True)
+class Grip:
+    """How this bench is to be handled. Times in ns and s, positions in steps."""
+
+    settle_ns: int
+    backlash_steps: int
+    lowest_steps: int
+    longest_gate_ns: int
+    highest_rate_per_s: float
+    dead_time_ns: float
+    move_timeout_s: float
+    reply_timeout_s: float = 5.0
+
+
+class Hands:
+    """Move, settle, expose; and let go."""
+
+    def __init__(self, devices: Devices, grip: Grip, clock: Clock) -> None:
+        self._devices = devices
+        self._grip = grip
+        self._clock = clock
+        self._start_ns = clock.monotonic_ns()
+        self._position_steps: int | None = None
+        self._shutter_is_open: bool | None = None
+        self._dwell_ends = False
+        self._halted = False
+
+    def at_ns(self) -> int:
+        """Nanoseconds since the session began."""
+        return self._clock.monotonic_ns() - self._start_ns
+
+    def arm(self) -> None:
+        """Forget earlier wishes; called in the same breath that starts an action."""
+        self._dwell_ends = self._halted = False
+
+    def end_dwell(self) -> None:
+        """The point ends after the gate in progress."""
+        self._dwell_ends = True
+
+    async def halt(self) -> None:
+        """Stop motion now; the point ends after the gate in progress."""
+        self._dwell_ends = self._halted = True
+        await self._devices.drive.halt()
+
+    async def prepare(self) -> Ending:
+        """Shutter closed first, then who is there, then the drive's reference mark, then the air."""
+        self._position_steps = None
+        wait_s = self._grip.reply_timeout_s
+        try:
+            await self._set_shutter(False)
+            identities = {
+                role: asdict(await device.identify(deadline_s=wait_s))
+                for role, device in self._devices.by_role().items()
+            }
+            if self._halted:
+                return Kind.HALTED, {"at_ns": self.at_ns()}
+            homed = await self._devices.drive.home(deadline_s=self._grip.move_timeout_s)
+            self._position_steps = homed.steps
+            ambient = await self._read_ambient()
+        except Halted:
+            return self._let_go()
+        return Kind.PREPARED, {
+            "at_ns": self.at_ns(),
+            "identities": identities,
+            "home_steps": homed.steps,
+            "ambient": ambient,
+        }
+
+    async def point(self, *, sweep: int, index: int, visit: Visit) -> Ending:
+        """One visit. What was counted in whole gates before an interruption is kept as a shorter point."""
+        started_ns = self.at_ns()
+        try:
+            reported_steps = await self._go_to(visit.steps)
+            await self._set_shutter(visit.light)
+            counts, gate_ns, gates, flags = await self._dwell(visit)
+        except Halted:
+            return self._let_go()
+        if self._dwell_ends:
+            await self._set_shutter(False)
+        if gates == 0:
+            return Kind.HALTED, {"at_ns": self.at_ns()}
+        body: dict[str, Any] = {
+            "at_ns": started_ns,
+            "end_ns": self.at_ns(),
+            "sweep": sweep,
+            "index": index,
+            "group": visit.group,
+            "light": visit.light,
+            "steps": visit.steps,
+            "reported_steps": reported_steps,
+            "counts": counts,
+            "gate_ns": gate_ns,
+            "gates": gates,
+            "flags": sorted(flags),
+            "complete": gate_ns >= visit.dwell_ns,
+        }
+        if not visit.light and self._devices.ambient is not None:
+            body["ambient"] = await self._read_ambient()
+        return Kind.POINT, body
+
+    async def safe(self) -> Ending:
+        """Shutter closed and motion stopped, whatever else fails. Never raises: problems are reported."""
+        problems: list[str] = []
+        # The shutter first: light harms more than motion. Its remembered state is not trusted here.
+        shutter = self._devices.shutter.set_open(False, deadline_s=self._grip.reply_timeout_s)
+        closed = await self._attempt("shutter", shutter, problems)
+        self._shutter_is_open = False if closed else None
+        stopped = await self._attempt("drive", self._devices.drive.halt(), problems)
+        return Kind.SAFE, {
+            "at_ns": self.at_ns(),
+            "shutter": "closed" if closed else "unknown",
+            "drive": "stopped" if stopped else "unknown",
+            "problems": problems,
+        }
+
+    # ---- parts ------------------------------------------------------------------------------------------
+
+    async def _attempt(self, role: str, call: Awaitable[None], problems: list[str]) -> bool:
+        try:
+            async with asyncio.timeout(self._grip.reply_timeout_s):
+                await call
+        except Exception as error:
+            problems.append(str(error) if isinstance(error, DeviceError) else f"{role}: {error!r}")
+            return False
+        return True
+
+    def _let_go(self) -> Ending:
+        if not self._halted:
+            raise HardwareFault("drive", "it halted by itself; look for a limit switch or a stop button")
+        return Kind.HALTED, {"at_ns": self.at_ns()}
+
+    async def _go_to(self, steps: int) -> int:
+        """Arrive from below: a worm's slack is then always taken up on the same side."""
+        here = self._position_steps
+        if here == steps:
+            return steps
+        self._position_steps = None  # unknown until the drive has answered
+        wait_s = self._grip.move_timeout_s
+        if (here is None or steps < here) and self._grip.backlash_steps > 0:
+            below = max(steps - self._grip.backlash_steps, self._grip.lowest_steps)
+            await self._devices.drive.move_to(below, deadline_s=wait_s)
+        moved = await self._devices.drive.move_to(steps, deadline_s=wait_s)
+        if moved.steps != steps:
+            raise HardwareFault("drive", f"asked to go to {steps} steps, it reports {moved.steps}")
+        self._position_steps = moved.steps
+        await asyncio.sleep(self._grip.settle_ns * 1e-9)
+        return moved.steps
+
+    async def _dwell(self, visit: Visit) -> tuple[int, int, int, set[str]]:
+        counts = gate_ns = gates = 0
+        flags: set[str] = set()
+        while gate_ns < visit.dwell_ns and not self._dwell_ends:
+            asked_ns = min(self._grip.longest_gate_ns, visit.dwell_ns - gate_ns)
+            gate = await self._devices.detector.gate(
+                asked_ns, deadline_s=asked_ns * 1e-9 + self._grip.reply_timeout_s
+            )
+            if gate.gate_ns <= 0:
+                raise LinkError("detector", f"it reports a gate of {gate.gate_ns} ns")
+            counts += gate.counts
+            gate_ns += gate.gate_ns
+            gates += 1
+            flags.update(gate.flags)
+            if gate.counts * self._grip.dead_time_ns > HIGHEST_DEAD_TIME_FRACTION * gate.gate_ns:
+                flags.add("dead-time")
+            await self._guard_light(gate.counts / (gate.gate_ns * 1e-9))
+        return counts, gate_ns, gates, flags
+
+    async def _guard_light(self, rate_per_s: float) -> None:
+        if rate_per_s > self._grip.highest_rate_per_s:
+            await self._set_shutter(False)
+            raise OverLight(
+                "detector",
+                f"{rate_per_s:.3g} counts per second, the bench allows {self._grip.highest_rate_per_s:.3g}; "
+                "narrow the slits or put in a filter",
+            )
+
+    async def _set_shutter(self, is_open: bool) -> None:
+        if self._shutter_is_open is not is_open:
+            self._shutter_is_open = None
+            await self._devices.shutter.set_open(is_open, deadline_s=self._grip.reply_timeout_s)
+            self._shutter_is_open = is_open
+
+    async def _read_ambient(self) -> dict[str, float] | None:
+        if self._devices.ambient is None:
+            return None
+        return asdict(await self._devices.ambient.read(deadline_s=self._grip.reply_timeout_s))

@@ -1,0 +1,397 @@
+"""The run as a state machine without I/O.
+
+It holds ONE outstanding action and a few wishes. `LEGAL` says which record may come under which action;
+`step` takes one record in; `advance` alone starts things, and only when nothing is outstanding. Records come
+in journal order, so a run is resumed by folding the same `step` over its journal: there is no other rebuild.
+
+    action     what the machine waits for            records that end it
+    nothing    a wish (only while paused)
+    prepare    devices identified, homed, dark safe  prepared, halted, fault
+    point      one dwell at one position             point, halted, fault
+    look       an answer of the analysis             look, conclusion, fault
+    halt       the hands to let go                   point, halted, prepared, fault
+    safe       shutter closed, motion stopped        safe, fault
+
+Invariants (tests/test_machine.py holds them over random sequences):
+- at most one action is outstanding, and every effect that starts one follows a moment with none;
+- after a stop no point starts; a safe stop always precedes the conclusion when devices are open;
+- the run ends exactly once, with a reason from StopReason, and nothing is accepted afterwards;
+- points are never lost or counted twice: the tally is the sum of the good points so far;
+- decisions depend on the order of records only, never on when a look's answer arrived.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from dataclasses import dataclass
+from enum import StrEnum
+from typing import Any
+
+from analysis.allocate import Visit, Window, next_sweep
+from daq.records import Body, Kind, StopReason
+from daq.tally import Snapshot, Tally
+
+LOOK_LAG_VISITS = 6
+"""A look's answer applies this many visits after its horizon: time for a worker to think while the bench
+measures on, and the same in every replay however fast the computer is."""
+
+LOOK_RATIO = 1.2
+"""Looks are geometric in the collected light."""
+
+FAULTS_IN_A_ROW = 3
+"""A repeatable fault is repaired by preparing anew, this many times without a good point between."""
+
+
+class MachineError(RuntimeError):
+    """A record that is not legal now: a defect of the program, never of the bench."""
+
+
+class Action(StrEnum):
+    NOTHING = "nothing"
+    PREPARE = "prepare"
+    POINT = "point"
+    LOOK = "look"
+    HALT = "halt"
+    SAFE = "safe"
+
+
+_ALWAYS = frozenset(Action)
+
+LEGAL: dict[str, frozenset[Action]] = {
+    Kind.SESSION: _ALWAYS,
+    Kind.WISH: _ALWAYS,
+    Kind.DEADLINE: _ALWAYS,
+    Kind.LOOK: _ALWAYS,
+    Kind.FAULT: _ALWAYS,
+    Kind.PREPARED: frozenset({Action.PREPARE, Action.HALT}),
+    Kind.POINT: frozenset({Action.POINT, Action.HALT}),
+    Kind.HALTED: frozenset({Action.POINT, Action.HALT}),
+    Kind.SAFE: frozenset({Action.SAFE}),
+    Kind.CONCLUSION: frozenset({Action.LOOK}),
+}
+
+
+@dataclass(frozen=True, slots=True)
+class StartPrepare:
+    """Open, identify, home, close the shutter, read the air."""
+
+
+@dataclass(frozen=True, slots=True)
+class StartPoint:
+    """Go to `visit.steps` and count for `visit.dwell_ns`."""
+
+    sweep: int
+    index: int
+    visit: Visit
+
+
+@dataclass(frozen=True, slots=True)
+class StartLook:
+    """Weigh the evidence up to `horizon` points. `final` asks for the conclusion."""
+
+    horizon: int
+    now: Snapshot
+    previous: Snapshot | None
+    first: Snapshot | None
+    previous_look: dict[str, Any] | None
+    final: bool
+
+
+@dataclass(frozen=True, slots=True)
+class EndDwell:
+    """Let the point end after the gate in progress; what was counted stays."""
+
+
+@dataclass(frozen=True, slots=True)
+class Halt:
+    """Stop motion at once and end the dwell after the gate in progress."""
+
+
+@dataclass(frozen=True, slots=True)
+class StartSafe:
+    """Shutter closed, motion stopped."""
+
+
+Effect = StartPrepare | StartPoint | StartLook | EndDwell | Halt | StartSafe
+
+
+@dataclass(slots=True)
+class _Pending:
+    """A look under way: what it sees, when its answer applies, and the answer once it is here."""
+
+    request: StartLook
+    visits_left: int
+    asked: bool = False
+    answer: dict[str, Any] | None = None
+
+
+class Machine:
+    """One run. `plan` is the head's plan: window, dwells and limits as plain numbers."""
+
+    def __init__(self, plan: Body) -> None:
+        self.window = Window.from_json(plan["window"])
+        self.time_limit_ns: int = plan["time_limit_ns"]
+        self.light_limit_ns: int | None = plan["light_limit_ns"]
+        self.action = Action.NOTHING
+        self.paused = False
+        self.stop: StopReason | None = None
+        self.ended = False
+        self.tally = Tally()
+        self.points = 0
+        self.light_ns = 0
+        self.sweeps_done = 0
+        self.looks: list[dict[str, Any]] = []
+        self.conclusion: dict[str, Any] | None = None
+        self.bench_ns = 0
+        self._session_base_ns = 0
+        self._devices = False
+        self._prepared = False
+        self._resting = False
+        self._made_safe = False
+        self._dwell_ending = False
+        self._final_asked = False
+        self._faults_in_a_row = 0
+        self._visits: tuple[Visit, ...] = next_sweep(self.window, number=0)
+        self._cursor = 0
+        self._counted_ns = 0
+        self._pending: _Pending | None = None
+        self._first: Snapshot | None = None
+        self._previous: Snapshot | None = None
+        self._light_at_last_look_ns = 0
+
+    # ---- records in -------------------------------------------------------------------------------------
+
+    def admit(self, kind: str) -> None:
+        """Raises MachineError if a record of this kind is not legal now. Asked before it is journalled."""
+        if self.ended:
+            raise MachineError(f"record '{kind}' after the end of the run")
+        allowed = LEGAL.get(kind)
+        if allowed is None or self.action not in allowed:
+            raise MachineError(f"record '{kind}' is not legal while the machine waits for '{self.action}'")
+
+    def step(self, kind: str, body: Body) -> list[Effect]:
+        """Take one record in and return what is to be started or interrupted because of it."""
+        self.admit(kind)
+        if kind == Kind.SESSION:
+            self._begin_session(body)
+        else:
+            self.bench_ns = max(self.bench_ns, self._session_base_ns + body.get("end_ns", body["at_ns"]))
+            _TAKE[Kind(kind)](self, body)
+        return list(self.advance())
+
+    def _begin_session(self, body: Body) -> None:
+        """A process takes the run up (again): whatever was outstanding died with the last one."""
+        self._session_base_ns = self.bench_ns
+        self._devices = body["devices"]
+        self._prepared = self._resting = self._made_safe = False
+        self._dwell_ending = self._final_asked = False
+        if self._pending is not None:
+            self._pending.asked = False
+        self._faults_in_a_row = 0
+        self.action = Action.NOTHING
+        self.paused = False
+        if not self._devices:
+            self._stop_for(StopReason.INTERRUPTED)
+
+    def _prepared_record(self, body: Body) -> None:
+        self._prepared = True
+        self._resting = True
+        self.action = Action.NOTHING
+
+    def _point_record(self, body: Body) -> None:
+        self.action = Action.NOTHING
+        self._dwell_ending = False
+        self._faults_in_a_row = 0
+        self.points += 1
+        if body["light"]:
+            self.light_ns += body["gate_ns"]
+        if not body["flags"]:
+            self.tally.add(
+                steps=body["steps"],
+                group=body["group"],
+                light=body["light"],
+                counts=body["counts"],
+                gate_ns=body["gate_ns"],
+            )
+        self._counted_ns += body["gate_ns"]
+        if self._counted_ns >= self._visits[self._cursor].dwell_ns:
+            self._next_visit()
+
+    def _halted_record(self, body: Body) -> None:
+        self.action = Action.NOTHING
+        self._dwell_ending = False
+
+    def _wish_record(self, body: Body) -> None:
+        match body["wish"]:
+            case "pause":
+                self.paused = True
+            case "resume":
+                self.paused = False
+            case "stop":
+                self._stop_for(StopReason(body["reason"]))
+            case other:
+                raise MachineError(f"unknown wish '{other}'")
+
+    def _deadline_record(self, body: Body) -> None:
+        self._stop_for(StopReason.TIME_LIMIT)
+
+    def _look_record(self, body: Body) -> None:
+        pending = self._pending
+        if pending is None or pending.request.horizon != body["horizon"] or pending.answer is not None:
+            return  # asked for twice around a restart: the first answer stands
+        pending.answer = body["look"]
+        if self.action is Action.LOOK and not self._final_asked:
+            self.action = Action.NOTHING
+
+    def _fault_record(self, body: Body) -> None:
+        of_devices = body["action"] in (Action.PREPARE, Action.POINT)
+        if body["action"] == Action.SAFE:
+            self._made_safe = self._resting = True
+        if of_devices or body["action"] == Action.SAFE:
+            self.action = Action.NOTHING
+            self._dwell_ending = False
+        if of_devices and body["repeat"] and self._faults_in_a_row < FAULTS_IN_A_ROW:
+            self._faults_in_a_row += 1
+            self._prepared = False
+            return
+        self._stop_for(_FAULT_REASONS.get(body["error"], StopReason.FAULT))
+
+    def _safe_record(self, body: Body) -> None:
+        self.action = Action.NOTHING
+        self._resting = True
+        self._made_safe = self.stop is not None
+
+    def _conclusion_record(self, body: Body) -> None:
+        self.action = Action.NOTHING
+        self.conclusion = dict(body)
+        self.ended = True
+
+    def _stop_for(self, reason: StopReason) -> None:
+        """The first reason stands."""
+        if self.stop is None:
+            self.stop = reason
+
+    # ---- what to do next --------------------------------------------------------------------------------
+
+    def advance(self) -> Iterable[Effect]:
+        """Start the next thing, if nothing is outstanding; interrupt what a wish overtakes."""
+        if self.ended:
+            return
+        yield from self._interrupt()
+        if self.action is not Action.NOTHING:
+            return
+        if self.stop is None:
+            self._apply_look()
+            self._check_limits()
+        if self.stop is not None:
+            yield self._wind_up()
+        elif self.paused:
+            if self._prepared and not self._resting:
+                yield self._begin(Action.SAFE, StartSafe())
+        elif not self._prepared:
+            yield self._begin(Action.PREPARE, StartPrepare())
+        else:
+            yield from self._measure()
+
+    def _interrupt(self) -> Iterable[Effect]:
+        if self.stop is not None:
+            if self.action in (Action.PREPARE, Action.POINT):
+                self.action = Action.HALT
+                yield Halt()
+            elif self.action is Action.LOOK and not self._final_asked:
+                self.action = Action.NOTHING
+        elif self.paused and self.action is Action.POINT and not self._dwell_ending:
+            self._dwell_ending = True
+            yield EndDwell()
+
+    def _begin(self, action: Action, effect: Effect) -> Effect:
+        self.action = action
+        return effect
+
+    def _wind_up(self) -> Effect:
+        if self._devices and not self._made_safe:
+            return self._begin(Action.SAFE, StartSafe())
+        self._final_asked = True
+        return self._begin(Action.LOOK, self._look_request(final=True))
+
+    def _measure(self) -> Iterable[Effect]:
+        if self._pending is None and self._sweep_is_over():
+            self._plan_sweep()
+        if self._pending is not None:
+            if not self._pending.asked and self._pending.answer is None:
+                self._pending.asked = True
+                yield self._pending.request
+            if self._pending.visits_left <= 0:
+                self.action = Action.LOOK  # the answer is late: wait, decisions do not depend on speed
+                return
+        visit = self._visits[self._cursor].shortened(self._counted_ns, self._light_left_ns())
+        self._resting = False
+        yield self._begin(Action.POINT, StartPoint(self.sweeps_done, self._cursor, visit))
+
+    def _plan_sweep(self) -> None:
+        self.sweeps_done += 1
+        self._visits = next_sweep(self.window, number=self.sweeps_done)
+        self._cursor = 0
+        if self.light_ns >= LOOK_RATIO * self._light_at_last_look_ns:
+            lag = min(LOOK_LAG_VISITS, len(self._visits) - 1)
+            self._pending = _Pending(self._look_request(final=False), visits_left=lag)
+            self._light_at_last_look_ns = self.light_ns
+
+    def _next_visit(self) -> None:
+        self._cursor += 1
+        self._counted_ns = 0
+        if self._pending is not None:
+            self._pending.visits_left -= 1
+
+    def _sweep_is_over(self) -> bool:
+        return self._cursor >= len(self._visits)
+
+    def _look_request(self, *, final: bool) -> StartLook:
+        return StartLook(
+            horizon=self.points,
+            now=self.tally.snapshot(),
+            previous=self._previous,
+            first=self._first,
+            previous_look=self.looks[-1] if self.looks else None,
+            final=final,
+        )
+
+    def _apply_look(self) -> None:
+        pending = self._pending
+        if pending is None or pending.visits_left > 0 or pending.answer is None:
+            return
+        self._pending = None
+        self.looks.append(pending.answer)
+        self._previous = pending.request.now
+        if self._first is None:
+            self._first = pending.request.now
+        if pending.answer["goal_reached"]:
+            self._stop_for(StopReason.GOAL_REACHED)
+
+    def _light_left_ns(self) -> int | None:
+        return None if self.light_limit_ns is None else self.light_limit_ns - self.light_ns
+
+    def _check_limits(self) -> None:
+        if self.bench_ns >= self.time_limit_ns:
+            self._stop_for(StopReason.TIME_LIMIT)
+        left_ns = self._light_left_ns()
+        if left_ns is not None and left_ns <= 0:
+            self._stop_for(StopReason.LIGHT_LIMIT)
+
+
+_TAKE = {
+    Kind.PREPARED: Machine._prepared_record,
+    Kind.POINT: Machine._point_record,
+    Kind.HALTED: Machine._halted_record,
+    Kind.WISH: Machine._wish_record,
+    Kind.DEADLINE: Machine._deadline_record,
+    Kind.LOOK: Machine._look_record,
+    Kind.FAULT: Machine._fault_record,
+    Kind.SAFE: Machine._safe_record,
+    Kind.CONCLUSION: Machine._conclusion_record,
+}
+
+_FAULT_REASONS = {
+    "OverLight": StopReason.OVER_LIGHT,
+    "Internal": StopReason.INTERNAL_ERROR,
+}

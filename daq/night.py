@@ -1,0 +1,135 @@
+"""A night: targets one after another on one bench, each a run with a journal and a file of its own."""
+
+from __future__ import annotations
+
+import asyncio
+import logging
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+from daq.carry import Observer, Stopper, carry_run, journal_path_of
+from daq.hands import Devices
+from daq.head import make_head
+from daq.journal import FolderLock, Journal
+from daq.machine import Machine
+from daq.nightfile import LoadedNight
+from daq.records import StopReason, run_identity
+from daq.target import LoadedTarget
+from drivers.bench import LoadedBench
+from drivers.clock import Clock
+from drivers.factory import load_factories, make
+from drivers.protocols import DriverContext
+
+log = logging.getLogger(__name__)
+
+ENDS_THE_NIGHT = frozenset({StopReason.STOPPED_BY_USER, StopReason.NIGHT_DEADLINE, StopReason.INTERNAL_ERROR})
+"""After these the remaining targets are not started. A fault at one target does not cost the others."""
+
+
+@dataclass(frozen=True, slots=True)
+class NightOrder:
+    """What is to be done: a bench, targets in order, where the files go, and the seed of simulated devices."""
+
+    bench: LoadedBench
+    targets: Sequence[LoadedTarget]
+    out: Path
+    seed: int
+    night: LoadedNight | None = None
+    operator: str | None = None
+
+    @property
+    def time_limit_s(self) -> float | None:
+        return None if self.night is None else self.night.night.limits.time_s
+
+
+def open_devices(loaded: LoadedBench, clock: Clock, seed: int) -> Devices:
+    """Everything the bench file names. Raises SettingsError for what it says, DeviceError for what answers."""
+    bench, factories = loaded.bench, load_factories(loaded)
+
+    def opened(role: str, options: dict[str, Any], world: Any) -> Any:
+        context = DriverContext(clock=clock, role=role, seed=seed, folder=str(loaded.folder), world=world)
+        return make(factories[role], options, context, str(loaded.path))
+
+    world = None if bench.world is None else opened("world", bench.world.options, None)
+    return Devices(
+        drive=opened("drive", bench.drive.options, world),
+        detector=opened("detector", bench.detector.options, world),
+        shutter=opened("shutter", bench.shutter.options, world),
+        ambient=None if bench.ambient is None else opened("ambient", bench.ambient.options, world),
+    )
+
+
+async def run_night(
+    order: NightOrder,
+    clock: Clock,
+    *,
+    observe: Observer,
+    on_run: Callable[[dict[str, Any]], None] = lambda head: None,
+    stopper: Stopper | None = None,
+) -> list[dict[str, Any]]:
+    """Run it; returns one summary a finished run. Raises SettingsError before anything is written or moved."""
+    start_utc_ns = clock.utc_ns()
+    stopper = stopper or Stopper()
+    heads = [_head(order, start_utc_ns, i, target) for i, target in enumerate(order.targets, start=1)]
+    load_factories(order.bench)
+    order.out.mkdir(parents=True, exist_ok=True)
+    summaries: list[dict[str, Any]] = []
+    with FolderLock(order.out):
+        devices = open_devices(order.bench, clock, order.seed)
+        timer = None
+        if order.time_limit_s is not None:
+            loop = asyncio.get_running_loop()
+            timer = loop.call_later(order.time_limit_s, stopper.stop, StopReason.NIGHT_DEADLINE, "night")
+        try:
+            for head in heads:
+                head["created_utc_ns"] = clock.utc_ns()
+                on_run(head)
+                journal = Journal.create(
+                    journal_path_of(order.out, head["run_id"]), head, threaded=not clock.is_virtual
+                )
+                summary = await carry_run(
+                    head,
+                    journal,
+                    Machine(head["plan"]),
+                    devices=devices,
+                    clock=clock,
+                    session=1,
+                    reason="start",
+                    observe=observe,
+                    stopper=stopper,
+                )
+                summaries.append(summary)
+                if stopper.reason is not None or summary["stop_reason"] in ENDS_THE_NIGHT:
+                    break
+        finally:
+            if timer is not None:
+                timer.cancel()
+            for problem in await devices.close():
+                log.warning("closing %s", problem)
+    return summaries
+
+
+def _head(order: NightOrder, start_utc_ns: int, ordinal: int, target: LoadedTarget) -> dict[str, Any]:
+    attempt = 1
+    while journal_or_file_exists(order.out, start_utc_ns, ordinal, target.slug, attempt):
+        attempt += 1
+    return make_head(
+        order.bench,
+        target,
+        night=order.night,
+        night_start_utc_ns=start_utc_ns,
+        created_utc_ns=start_utc_ns,
+        ordinal=ordinal,
+        attempt=attempt,
+        seed=order.seed,
+        operator=order.operator,
+    )
+
+
+def journal_or_file_exists(out: Path, start_utc_ns: int, ordinal: int, slug: str, attempt: int) -> bool:
+    run_id = run_identity(
+        night_start_utc_ns=start_utc_ns, ordinal=ordinal, target_slug=slug, attempt=attempt
+    )
+    return journal_path_of(out, run_id).exists() or (out / f"{run_id}.h5").exists()
