@@ -1,9 +1,9 @@
 """The refractive index of air after Ciddor (1996), and wavelengths in air and in vacuum.
 
 P. E. Ciddor, "Refractive index of air: new equations for the visible and near infrared", Appl. Opt. 35,
-1566 (1996), below "Ciddor". Standard uncertainty of the equations 2e-8 to 5e-8 between 350 and 1300 nm in
-ordinary laboratory air (Ciddor, section 5). Outside 300..1690 nm they extrapolate: by convention air
-wavelengths are used down to 200 nm, and nothing here vouches for absorption bands in the infrared.
+1566 (1996), below "Ciddor". In ordinary laboratory air the equations are good to some 2e-8 to 5e-8 (memory).
+Outside 300..1690 nm they extrapolate: by convention air wavelengths are used down to 200 nm, and nothing
+here vouches for absorption bands in the infrared.
 
 A wavelength may be a float or an array of any shape; the answer has the same type and shape.
 """
@@ -63,7 +63,7 @@ class Air:
                 raise ValueError(f"{name} = {value!r}; allowed: {lowest:g} to {highest:g}")
         if self._vapour_fraction() > 1.0:
             raise ValueError(
-                f"humidity_percent = {self.humidity_percent!r} at {self.temperature_c:g} deg C; allowed: less "
+                f"humidity_percent = {self.humidity_percent!r} at {self.temperature_c:g} C; allowed: less "
                 f"(the vapour alone would press more than pressure_pa = {self.pressure_pa:g})"
             )
 

@@ -4,7 +4,7 @@ Block j is what was counted between looks j-1 and j. Given the total of a block 
 are multinomial with shares p_i = rate_i live_i / sum(rate live): brightness, and its drift from block to
 block, drops out. For a claim against a composite rival the e-process is
 
-    log E_k = sum_{j=2..k} log p(block j | predicted from looks before j) - sup_rival sum_{j=2..k} log p(block j)
+    log E_k = sum_{j=2..k} log p(block j | looks before j) - sup_rival sum_{j=2..k} log p(block j | rival)
 
 The first sum is a density that the past fixes, so under every member of the rival E_k is bounded by a
 martingale that starts at 1, and the chance that it EVER reaches 1/alpha is at most alpha (Wasserman, Ramdas,

@@ -21,12 +21,23 @@ from analysis.question import FitSummary
 class Model(Protocol):
     """What can be fitted; `analysis.model.FeatureModel` is the one in use."""
 
-    names: tuple[str, ...]
-    lower: FloatArray
-    upper: FloatArray
-    prior_mean: FloatArray
-    prior_sd: FloatArray
-    sigma: FloatArray | None
+    @property
+    def names(self) -> tuple[str, ...]: ...
+
+    @property
+    def lower(self) -> FloatArray: ...
+
+    @property
+    def upper(self) -> FloatArray: ...
+
+    @property
+    def prior_mean(self) -> FloatArray: ...
+
+    @property
+    def prior_sd(self) -> FloatArray: ...
+
+    @property
+    def sigma(self) -> FloatArray | None: ...
 
     @property
     def data(self) -> FloatArray: ...

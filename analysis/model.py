@@ -28,8 +28,11 @@ _TINY = 1e-12
 class Background(Protocol):
     """Light that belongs to no line, as a rate over position."""
 
-    names: tuple[str, ...]
-    lower: tuple[float, ...]
+    @property
+    def names(self) -> tuple[str, ...]: ...
+
+    @property
+    def lower(self) -> tuple[float, ...]: ...
 
     def evaluate(self, wavelength_nm: FloatArray, values: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Rate (N,) and its Jacobian (N, number of parameters)."""

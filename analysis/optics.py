@@ -1,9 +1,9 @@
 """What a scanning spectrometer sees: steps to wavelength and back, slit images, diffraction, line width.
 
 A plane grating turned between two fixed arms obeys m lambda = d (sin alpha + sin beta). The arms enclose the
-constant angle 2K, so alpha = phi - K, beta = phi + K with phi the rotation from zero order, and
-m lambda = 2 d cos K sin phi (e.g. M. C. Hutley, "Diffraction Gratings", 1982, ch. 2). Wavelengths are those
-in the medium that the grating stands in.
+constant angle 2K, so alpha = phi + K, beta = phi - K with phi the rotation from zero order, and
+m lambda = 2 d cos K sin phi (e.g. M. C. Hutley, "Diffraction Gratings", 1982). A positive rotation turns
+the normal away from the entrance arm. Wavelengths are those in the medium that the grating stands in.
 """
 
 from __future__ import annotations
@@ -129,11 +129,11 @@ class PlaneMount:
 
     def incidence_rad(self, steps: npt.ArrayLike) -> FloatArray:
         """alpha, rad."""
-        return self.rotation_rad(steps) - self.half_included_angle_rad
+        return self.rotation_rad(steps) + self.half_included_angle_rad
 
     def diffraction_rad(self, steps: npt.ArrayLike) -> FloatArray:
         """beta, rad."""
-        return self.rotation_rad(steps) + self.half_included_angle_rad
+        return self.rotation_rad(steps) - self.half_included_angle_rad
 
     def wavelength_nm(self, steps: npt.ArrayLike) -> FloatArray:
         """2 d cos K sin phi / m; zero at zero order, negative on its far side."""
@@ -156,7 +156,7 @@ class PlaneMount:
     def reciprocal_linear_dispersion_nm_per_mm(self, wavelength_nm: float) -> float:
         """nm per mm across the exit slit: d cos beta / (|m| f)."""
         rotation = self._rotation_for_rad(wavelength_nm)
-        return self._nm_per_mm(rotation + self.half_included_angle_rad)
+        return self._nm_per_mm(rotation - self.half_included_angle_rad)
 
     def _nm_per_mm(self, angle_rad: float) -> float:
         return self.groove_spacing_nm * math.cos(angle_rad) / (abs(self.order) * self.focal_length_mm)
@@ -164,8 +164,8 @@ class PlaneMount:
     def bandpass_nm(self, wavelength_nm: float) -> tuple[float, float]:
         """w d cos alpha/(|m| f) and w d cos beta/(|m| f): full widths of the two boxes."""
         rotation, half = self._rotation_for_rad(wavelength_nm), self.half_included_angle_rad
-        entrance_nm = 1e-3 * self.entrance_slit_um * self._nm_per_mm(rotation - half)
-        exit_nm = 1e-3 * self.exit_slit_um * self._nm_per_mm(rotation + half)
+        entrance_nm = 1e-3 * self.entrance_slit_um * self._nm_per_mm(rotation + half)
+        exit_nm = 1e-3 * self.exit_slit_um * self._nm_per_mm(rotation - half)
         return entrance_nm, exit_nm
 
     def diffraction_fwhm_nm(self, wavelength_nm: float) -> float:

@@ -25,6 +25,7 @@ class Feature:
     shape : "voigt" or "gaussian". widths : "equal" or "free". background : "flat" or "slope".
     known_lines_nm : further lines of known place, strength free.
     shape_allowance : what may be left of the line-shape error, fraction of the peak.
+    reach_nm : how far from the main line a second one is sought; None: as far as the data go.
     """
 
     wavelength_nm: float
@@ -36,6 +37,7 @@ class Feature:
     background: str = "slope"
     known_lines_nm: tuple[float, ...] = ()
     shape_allowance: float = 0.01
+    reach_nm: float | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -110,7 +112,7 @@ class Look:
     separation_nm : >= 0. centre_nm is the stronger line, second_nm the weaker one, ratio = weaker/stronger
     in area. sigma_nm and gamma_nm are the Voigt part, fwhm_nm the whole observed single line.
     log_e_* : evidence for each claim, natural log; max_* the running maxima held against bound_*.
-    log_numerator_* : sums of predictive log densities; predictive_*: (K, P) parameter sets that will predict
+    log_numerator_* : sums of predictive log densities; predictive_* : (K, P) parameter sets that predict
     the next block, in the order of single.names and pair.names.
     """
 
@@ -145,6 +147,7 @@ class Look:
     log_numerator_single: float
     predictive_pair: tuple[tuple[float, ...], ...]
     predictive_single: tuple[tuple[float, ...], ...]
+    window_nm: tuple[float, float]
     exclusion: tuple[Exclusion, ...]
     flags: tuple[str, ...]
     evidence: tuple[str, ...]

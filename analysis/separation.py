@@ -89,23 +89,24 @@ def separation_of(
         air_nm, u_air_nm = given_nm, u_separation_nm
         low, high = (vacuum_from_air_nm(wavelength_air_nm=w, air=air) for w in (low, high))
         vacuum_nm = high - low
-        u_vacuum_nm = u_separation_nm * _vacuum_per_air(0.5 * (low + high), air)
+        stretch = (_vacuum_per_air(low, air), _vacuum_per_air(high, air))
     elif medium == "vacuum":
-        vacuum_nm, u_vacuum_nm = given_nm, u_separation_nm
-        # The slope wants a little room on its short side.
+        vacuum_nm, stretch = given_nm, (1.0, 1.0)
+        # The slope of the index wants a little room on its short side.
         if low > SHORTEST_NM * 1.001:
             in_air = [air_from_vacuum_nm(wavelength_vacuum_nm=w, air=air) for w in (low, high)]
             air_nm = in_air[1] - in_air[0]
-            u_air_nm = u_separation_nm / _vacuum_per_air(0.5 * (low + high), air)
+            u_air_nm = 0.5 * u_separation_nm * sum(1.0 / _vacuum_per_air(w, air) for w in (low, high))
     else:
         raise ValueError(f"medium = {medium!r}; allowed: 'air', 'vacuum'")
 
     per_cm = 1e7 * vacuum_nm / (low * high)
-    # With the middle kept, lambda_1 lambda_2 = middle^2 - s^2/4, so that
-    # d/ds [s/(middle^2 - s^2/4)] = (middle^2 + s^2/4)/(lambda_1 lambda_2)^2.
-    middle_nm = 0.5 * (low + high)
-    slope = 1e7 * (middle_nm**2 + 0.25 * vacuum_nm**2) / (low * high) ** 2
-    u_per_cm = math.hypot(slope * u_vacuum_nm, per_cm * 2.0 * u_common_nm * middle_nm / (low * high))
+    # Each line moves by half the change of the separation, the middle stays.
+    u_vacuum_nm = 0.5 * u_separation_nm * (stretch[0] + stretch[1])
+    u_per_cm = math.hypot(
+        0.5e7 * u_separation_nm * (stretch[0] / low**2 + stretch[1] / high**2),
+        u_common_nm * per_cm * (low + high) / (low * high),
+    )
     return Separation(
         air_pm=None if air_nm is None else 1e3 * air_nm,
         u_air_pm=None if u_air_nm is None else 1e3 * u_air_nm,

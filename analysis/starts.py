@@ -78,7 +78,7 @@ def _polish(
         for start, (low, high) in zip(starts, limits, strict=True)
     ]
     best = sorted(range(len(rough)), key=lambda k: -rough[k].log_likelihood)
-    finals = []
+    finals: list[FitResult] = []
     for k in best[:2]:
         # the runner-up is finished only where it could still win
         if finals and rough[k].log_likelihood < finals[0].log_likelihood - 3.0:
@@ -99,17 +99,18 @@ class _Gram:
     known: NDArray[np.int64]
     base: NDArray[np.int64]
 
-    def solve(self, columns: NDArray[np.int64], tied: FloatArray | None = None) -> tuple[FloatArray, FloatArray]:
+    def solve(
+        self, columns: NDArray[np.int64], tied: float | None = None
+    ) -> tuple[FloatArray, FloatArray]:
         """Solutions (S, C) and reductions of chi square (S,) for S choices of C columns.
 
-        tied : the second column is added to the first with this factor (scalar array) and dropped.
+        tied : the second column is added to the first with this factor and dropped.
         """
         matrix = self.matrix[columns[:, :, None], columns[:, None, :]]
         target = self.target[columns]
         if tied is not None:
-            factor = float(tied)
             mix = np.eye(columns.shape[1])
-            mix[1, 0] = factor
+            mix[1, 0] = tied
             mix = np.delete(mix, 1, axis=1)
             matrix = mix.T @ matrix @ mix
             target = target @ mix
@@ -163,7 +164,8 @@ def _pair_starts(
     model: FeatureModel, width: tuple[float, float], within: Bounds | None, *, most: int
 ) -> list[FloatArray]:
     gram = _gram(model, width)
-    main, second = (part.ravel() for part in np.meshgrid(np.arange(gram.places.size), np.arange(gram.places.size)))
+    number = np.arange(gram.places.size)
+    main, second = np.repeat(number, number.size), np.tile(number, number.size)
     smallest = 0.0 if within is None else within.smallest_separation_nm
     apart = np.abs(gram.places[main] - gram.places[second])
     keep = (main != second) & (apart >= smallest - 0.5 * (gram.places[1] - gram.places[0]))
@@ -175,7 +177,7 @@ def _pair_starts(
     gain = np.where((solution[:, 0] > 0.0) & (ratio >= low) & (ratio <= high), gain, -np.inf)
     if within is not None:
         for factor in (low, high):
-            tied, tied_gain = gram.solve(columns, np.array(factor))
+            tied, tied_gain = gram.solve(columns, factor)
             better = (tied_gain > gain) & (tied[:, 0] > 0.0)
             gain = np.where(better, tied_gain, gain)
             spread = np.column_stack([tied[:, 0], factor * tied[:, 0], tied[:, 1:]])

@@ -58,7 +58,7 @@ def plan_scale(plan: Body) -> Scale:
 def fitted_curve(look: Body, head: Body, snapshot: Snapshot, *, kind: str) -> FloatArray:
     """The model rates of a look's fit (see `export_layout.Curve`)."""
     from analysis.question import Look, Question, from_json
-    from analysis.verdict import curve
+    from analysis.curve import curve
     from daq.looks import counts_of
 
     # what the record of a look carries beside the look itself
@@ -116,17 +116,19 @@ def _write(
     curve: Curve | None,
 ) -> RunWriter:
     try:
-        with h5py.File(temporary, "w", track_order=False) as file:
+        # In memory, about 50 bytes a point: HDF5 that meets a full disk ends the process with a signal, a
+        # plain write with an error.
+        with h5py.File(temporary, "w", driver="core", backing_store=False) as file:
             writer = RunWriter(file)
             for seq, kind, text in read_rows(journal_path, last_seq=last_seq):
                 writer.add(Record(seq, kind, decode(journal_path, seq, kind, text)), text)
             scale = scale_of(writer.summary.head["plan"])
             writer.finish(complete=_is_complete(writer, complete), scale=scale, curve=curve)
+            file.flush()
+            temporary.write_bytes(file.id.get_file_image())
     except (KeyError, TypeError, ValueError, OverflowError) as error:
         why = f"no {error} in it" if isinstance(error, KeyError) else str(error)
         raise ExportError(f"{journal_path}: a record does not fit the layout of a run file: {why}") from error
-    except RuntimeError as error:  # HDF5 says so when closing a file fails, as on a full disk
-        raise OSError(str(error)) from error
     return writer
 
 

@@ -37,7 +37,7 @@ def resolve(given: str, kind: str | None = None) -> Path:
 
     A shipped file is named by "benches/emberlight-3.toml", "benches/emberlight-3", "emberlight-3.toml" or
     "emberlight-3"; `kind` ("benches", "targets", "nights") keeps the search to one folder. Raises
-    SettingsError when nothing is there, with the nearest names, and when several shipped files have that name.
+    SettingsError with the nearest names when nothing is there, and when several shipped files fit.
     """
     path = Path(given)
     if path.exists():

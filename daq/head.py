@@ -9,6 +9,7 @@ from functools import lru_cache
 from pathlib import Path
 from typing import Any
 
+from daq.files import shipped_folder
 from daq.nightfile import LoadedNight
 from daq.plan import draw_up
 from daq.records import FORMAT, run_identity
@@ -16,6 +17,7 @@ from daq.spectrum import Spectrum, read_spectrum
 from daq.target import LoadedTarget
 from drivers.bench import LoadedBench
 
+SHIPPED = "shipped:"
 PACKAGES = ("gratingd", "numpy", "scipy", "h5py", "pydantic")
 
 
@@ -49,7 +51,7 @@ def make_head(
         "seed": seed,
         "operator": operator,
         "target": _file(target.target.name, target.slug, target.text, target.sha256),
-        "bench": _file(bench.bench.name, bench.slug, bench.text, bench.sha256) | {"path": bench.path.name},
+        "bench": _file(bench.bench.name, bench.slug, bench.text, bench.sha256) | {"path": place_of(bench.path)},
         "spectrum": None if spectrum is None else _spectrum(spectrum),
         "plan": plan,
         "question": question,
@@ -86,6 +88,19 @@ def _blas() -> str:
     config = np.show_config(mode="dicts")
     blas = config["Build Dependencies"]["blas"] if isinstance(config, dict) else {}
     return " ".join(str(blas.get(key, "")) for key in ("name", "version", "openblas configuration")).strip()
+
+
+def place_of(path: Path) -> str:
+    """A settings file's place as a head names it: `shipped:benches/...` or an absolute path."""
+    shipped, where = shipped_folder().resolve(), path.resolve()
+    if where.is_relative_to(shipped):
+        return SHIPPED + where.relative_to(shipped).as_posix()
+    return str(where)
+
+
+def path_of(place: str) -> Path:
+    """The inverse of `place_of`."""
+    return shipped_folder() / place.removeprefix(SHIPPED) if place.startswith(SHIPPED) else Path(place)
 
 
 def _file(name: str, slug: str, text: str, sha256: str) -> dict[str, Any]:

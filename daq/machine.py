@@ -312,7 +312,7 @@ class Machine:
         if self._devices and not self._made_safe:
             return self._begin(Action.SAFE, StartSafe())
         self._final_asked = True
-        return self._begin(Action.LOOK, self._look_request(final=True))
+        return self._begin(Action.LOOK, self.look_request(final=True))
 
     def _measure(self) -> Iterable[Effect]:
         if self._pending is None and self._sweep_is_over():
@@ -334,7 +334,7 @@ class Machine:
         self._cursor = 0
         if self.light_ns >= LOOK_RATIO * self._light_at_last_look_ns:
             lag = min(LOOK_LAG_VISITS, len(self._visits) - 1)
-            self._pending = _Pending(self._look_request(final=False), visits_left=lag)
+            self._pending = _Pending(self.look_request(final=False), visits_left=lag)
             self._light_at_last_look_ns = self.light_ns
 
     def _next_visit(self) -> None:
@@ -346,7 +346,8 @@ class Machine:
     def _sweep_is_over(self) -> bool:
         return self._cursor >= len(self._visits)
 
-    def _look_request(self, *, final: bool) -> StartLook:
+    def look_request(self, *, final: bool) -> StartLook:
+        """The evidence as it stands now."""
         return StartLook(
             horizon=self.points,
             now=self.tally.snapshot(),

@@ -12,7 +12,7 @@ from dataclasses import asdict
 from functools import lru_cache
 from typing import Any
 
-from analysis.air import LABORATORY_AIR, air_from_vacuum_nm, vacuum_from_air_nm
+from analysis.air import LABORATORY_AIR, STANDARD_AIR, air_from_vacuum_nm, vacuum_from_air_nm
 from analysis.allocate import Window
 from analysis.optics import Mount, PlaneMount, TableMount, expected_fwhm_nm
 from analysis.question import Feature, Question, to_json
@@ -104,16 +104,19 @@ def draw_up(
     return plan, to_json(question)
 
 
-def in_medium(wavelength_nm: float, given: str, wanted: str) -> float:
-    """A catalogue wavelength (in standard air, or vacuum) on a bench's scale (laboratory air, or vacuum).
+def in_medium(wavelength_nm: float, given: str, wanted: str, *, at_bench: bool = True) -> float:
+    """A catalogue wavelength (in standard air, or vacuum) on another scale.
 
-    The bench's air is taken as 20 C, 101 325 Pa, 50 %: a real laboratory differs by some 1e-6 of the
-    wavelength, which moves where a feature is looked for, not how far apart its lines are.
+    "air" is the bench's own, taken as 20 C, 101 325 Pa, 50 %, or standard air if not `at_bench`. A real
+    laboratory differs by some 1e-6 of the wavelength, which moves where a feature is looked for, not how far
+    apart its lines are.
     """
+    if given == wanted and not (wanted == "air" and at_bench):
+        return wavelength_nm
     vacuum_nm = wavelength_nm if given == "vacuum" else vacuum_from_air_nm(wavelength_air_nm=wavelength_nm)
     if wanted == "vacuum":
         return vacuum_nm
-    return air_from_vacuum_nm(wavelength_vacuum_nm=vacuum_nm, air=LABORATORY_AIR)
+    return air_from_vacuum_nm(wavelength_vacuum_nm=vacuum_nm, air=LABORATORY_AIR if at_bench else STANDARD_AIR)
 
 
 def target_wavelength_nm(target: LoadedTarget, medium: str) -> float:

@@ -70,7 +70,7 @@ def read_spectrum(path: str | Path) -> Spectrum:
             raise DataError(f"{path}: is not a regular file; give a CSV file")
         with file.open("rb") as stream:
             raw = stream.read(LARGEST_BYTES + 1)
-    except (OSError, ValueError) as error:  # ValueError: a NUL in the name
+    except OSError as error:
         raise DataError(f"{path}: cannot be read: {error}") from error
     if len(raw) > LARGEST_BYTES:
         raise DataError(

@@ -67,19 +67,20 @@ def complaints(model: type[BaseModel], data: Mapping[str, Any], error: Validatio
             lines.append(_join(place.path, value, entry["msg"]))
         else:
             lines.append(_join(place.path, value, f"must be {place.allowed()}{_hint(value, place)}"))
-    return lines + [line for path, line in missing if path not in explained]
+    lines += [line for path, line in missing if path not in explained]
+    return list(dict.fromkeys(lines))  # each branch of a union tells its own
 
 
 class _Place:
-    """Where in the table a problem sits: the path as typed, the field there, the models at that level."""
+    """Where in the table a problem sits: the path as typed, what it takes, the models at that level."""
 
     def __init__(self, models: Models) -> None:
         self.path = ""
         self.models = models
         self.table: Models = models
         self.key = ""
-        self.field: FieldInfo | None = None
-        self.in_list = False
+        self.annotation: Any = dict
+        self.metadata: Sequence[Any] = ()
 
     @classmethod
     def find(cls, model: type[BaseModel], data: Any, loc: Sequence[int | str], *, keep_last: bool) -> _Place:
@@ -89,28 +90,29 @@ class _Place:
             last = index == len(loc) - 1
             if isinstance(part, int):
                 place.path += f"[{part}]"
-                place.in_list = True
+                place._enter(_items_of(place.annotation), ())
                 inside = isinstance(data, Sequence) and not isinstance(data, str)
                 data = data[part] if inside and part < len(data) else None
             elif isinstance(data, Mapping) and (part in data or (last and keep_last)):
                 shown = part if re.fullmatch(r"[A-Za-z0-9_-]+", part) else repr(part)
                 place.path += f".{shown}" if place.path else shown
-                place.table, place.key, place.in_list = place.models, part, False
+                place.table, place.key = place.models, part
                 fields = [m.model_fields[part] for m in place.models if part in m.model_fields]
-                place.field = fields[0] if fields else None
-                place.models = _models_in(place.field.annotation) if place.field else []
+                if fields:
+                    place._enter(fields[0].annotation, fields[0].metadata)
+                else:
+                    place._enter(_items_of(place.annotation), ())
                 data = data.get(part)
             else:
                 place.models = [m for m in place.models if part in _literals(m)] or place.models
         return place
 
+    def _enter(self, annotation: Any, metadata: Sequence[Any]) -> None:
+        self.annotation, self.metadata = annotation, metadata
+        self.models = _models_in(annotation)
+
     def allowed(self) -> str:
-        if self.field is None:
-            return "a table"
-        annotation, metadata = self.field.annotation, self.field.metadata
-        if self.in_list:  # the item is at fault, not the list
-            annotation, metadata = get_args(annotation)[0], []
-        text = _describe(annotation, metadata)
+        text = _describe(self.annotation, self.metadata)
         unit = _unit(self.key) if "number" in text else ""
         return f"{text}, in {unit}" if unit else text
 
@@ -119,6 +121,16 @@ def _models_in(annotation: Any) -> Models:
     if isinstance(annotation, type) and issubclass(annotation, BaseModel):
         return [annotation]
     return [model for part in get_args(annotation) for model in _models_in(part)]
+
+
+def _items_of(annotation: Any) -> Any:
+    """What a list's items or a free table's values are."""
+    origin, parts = get_origin(annotation), get_args(annotation)
+    if origin in (Annotated, Union, types.UnionType):
+        return _items_of(parts[0])
+    if origin in (tuple, list):
+        return parts[0]
+    return parts[1] if origin is dict else Any
 
 
 def _literals(model: type[BaseModel]) -> set[Any]:
@@ -163,9 +175,13 @@ def _describe(annotation: Any, metadata: Sequence[Any]) -> str:
         return "true or false"
     if annotation is datetime.datetime:
         return "a date and time with its offset from UTC, such as 2031-02-11T18:00:00Z"
-    if origin is dict or (isinstance(annotation, type) and issubclass(annotation, BaseModel)):
+    if (
+        annotation is dict
+        or origin is dict
+        or (isinstance(annotation, type) and issubclass(annotation, BaseModel))
+    ):
         return "a table"
-    return str(annotation)
+    return f"of the kind {annotation}"
 
 
 def _flat(metadata: Sequence[Any]) -> Iterator[Any]:
@@ -240,8 +256,6 @@ def _hint(value: Any, place: _Place) -> str:
         return f"; {value!r}: use a point, no quotes" if "," in value else f"; {value!r}: no quotes"
     if isinstance(value, list) and "number" in wanted and len(value) == 2:
         return f"; for a decimal number use a point: {value[0]}.{value[1]}"
-    if isinstance(value, datetime.datetime) and value.tzinfo is None:
-        return "; the Z for UTC is missing"
     return ""
 
 
@@ -263,8 +277,6 @@ def as_typed(value: Any) -> str:
         text = "true" if value else "false"
     elif isinstance(value, datetime.datetime | datetime.date | datetime.time):
         text = value.isoformat()
-    elif isinstance(value, Mapping):
-        text = "a table"
     elif isinstance(value, int) and value.bit_length() > 1000:  # repr refuses thousands of digits
         text = f"a number of {value.bit_length()} bits"
     else:

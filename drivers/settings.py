@@ -59,9 +59,6 @@ def _factory(text: str) -> str:
     return text
 
 
-Positive = Annotated[float, Field(gt=0.0, le=1e15)]
-NotNegative = Annotated[float, Field(ge=0.0, le=1e15)]
-Probability = Annotated[float, Field(gt=0.0, lt=0.5)]
 Steps = Annotated[int, Field(ge=-2_000_000_000, le=2_000_000_000)]
 Name = Annotated[str, Field(min_length=1, max_length=80), AfterValidator(_one_line)]
 Factory = Annotated[str, AfterValidator(_factory)]

@@ -47,7 +47,7 @@ def registered(draw: np.random.Generator, *, rate_per_s: float, gate_s: float, d
         certain += taken
         left -= taken
         low = sure_until
-        new_high = gate_s - certain * dead_time_s
+        new_high = max(gate_s - certain * dead_time_s, low)  # max: against rounding
         left = int(draw.binomial(left, min(1.0, (new_high - low) / (high - low)))) if left else 0
         high = new_high
     ready_s = np.sort(draw.uniform(low, high, left))

@@ -16,6 +16,9 @@ from drivers.settings import StrictModel
 from simulators.draw import Draws
 
 
+_STILL_STEPS = 0.01  # ringing below this no longer counts as motion
+
+
 class DriveOptions(StrictModel):
     """`[world.options.drive]`: the mechanics as they truly are."""
 
@@ -99,7 +102,7 @@ class Stepper:
             self.options.speed_steps_per_s,
             self.options.acceleration_steps_per_s2,
         )
-        decays = 12.0 if self.options.ring_steps else 0.0  # 4 steps have become 2e-5 by then
+        decays = math.log(max(abs(self._ring_amplitude()) / _STILL_STEPS, 1.0))
         self._ring_until_ns = self._motion.end_ns + round(decays * self.options.ring_decay_s * 1e9)
         return self._motion.end_ns
 
@@ -148,11 +151,13 @@ class Stepper:
         motor = self._motor(self._motion.position(now_ns))
         return min(max(self._play_from, motor), motor + self.options.play_steps)
 
+    def _ring_amplitude(self) -> float:
+        way = self._motion.end - self._motion.start
+        return math.copysign(min(self.options.ring_steps, abs(way)), way)
+
     def _ringing(self, now_ns: int) -> float:
         after_s = (now_ns - self._motion.end_ns) * 1e-9
         if after_s < 0.0:
             return 0.0
-        way = self._motion.end - self._motion.start
-        amplitude = math.copysign(min(self.options.ring_steps, abs(way)), way)
         turn = 2.0 * math.pi * self.options.ring_frequency_hz * after_s
-        return amplitude * math.exp(-after_s / self.options.ring_decay_s) * math.cos(turn)
+        return self._ring_amplitude() * math.exp(-after_s / self.options.ring_decay_s) * math.cos(turn)

@@ -13,7 +13,17 @@ from typing import Any
 from pydantic import Field
 
 from drivers.errors import Halted, LimitError, LinkError, OverLight
-from drivers.protocols import AmbientReading, DriverContext, Gate, Identity, Moved
+from drivers.protocols import (
+    Ambient,
+    AmbientReading,
+    Detector,
+    DriverContext,
+    Gate,
+    GratingDrive,
+    Identity,
+    Moved,
+    Shutter,
+)
 from drivers.settings import StrictModel, parse_options
 from simulators.draw import Draws
 from simulators.world import SimulatedBench
@@ -189,21 +199,21 @@ def _options(options: dict[str, Any], context: DriverContext) -> MemoryOptions:
     return parse_options(MemoryOptions, options, f"{context.role}.options")
 
 
-def grating_drive(options: dict[str, Any], context: DriverContext) -> MemoryGratingDrive:
+def grating_drive(options: dict[str, Any], context: DriverContext) -> GratingDrive:
     """Factory of the drive."""
     return MemoryGratingDrive(_options(options, context), context)
 
 
-def counter(options: dict[str, Any], context: DriverContext) -> MemoryCounter:
+def counter(options: dict[str, Any], context: DriverContext) -> Detector:
     """Factory of the photon counter."""
     return MemoryCounter(_options(options, context), context)
 
 
-def shutter(options: dict[str, Any], context: DriverContext) -> MemoryShutter:
+def shutter(options: dict[str, Any], context: DriverContext) -> Shutter:
     """Factory of the shutter."""
     return MemoryShutter(_options(options, context), context)
 
 
-def ambient(options: dict[str, Any], context: DriverContext) -> MemoryAmbient:
+def ambient(options: dict[str, Any], context: DriverContext) -> Ambient:
     """Factory of the air sensor."""
     return MemoryAmbient(_options(options, context), context)

@@ -32,6 +32,7 @@ from drivers.settings import StrictModel
 FloatArray = NDArray[np.float64]
 
 _SLIT_NODES = 48  # points of the entrance slit
+_BLOCK = 64  # cells of the spread's grid that share one coarse wave
 _CELLS_PER_WIDTH = 16  # cells of the look-up grid per width of line and diffraction together
 
 
@@ -112,6 +113,14 @@ class Spectrometer:
         return float(entrance) / order, float(exit_) / order
 
 
+def _panels(end: float, count: int) -> tuple[FloatArray, FloatArray]:
+    """Gauss-Legendre nodes and weights on `count` even panels of (0, end), 16 to a panel."""
+    nodes, weights = leggauss(16)
+    width = end / count
+    places = (np.arange(count)[:, None] + (nodes + 1.0) / 2.0) * width
+    return places.ravel(), np.tile(weights * width / 2.0, count)
+
+
 class CumulatedSpread:
     """C(P): the share of a line's light with a path difference below P; line and diffraction together.
 
@@ -121,28 +130,30 @@ class CumulatedSpread:
     def __init__(
         self, *, centre_nm: float, diffraction_nm: float, sigma_nm: float, tail_nm: float, reach_nm: float
     ) -> None:
-        self._centre_nm = centre_nm
         self.width_nm = math.hypot(0.886 * diffraction_nm, 2.355 * sigma_nm)
         step = self.width_nm / _CELLS_PER_WIDTH
-        cells = math.ceil(reach_nm / step)
-        grid = np.arange(-cells, cells + 1) * step
+        blocks = 2 * math.ceil(reach_nm / step / _BLOCK) + 1
+        first_nm = -(blocks // 2) * _BLOCK * step
         # the triangle ends at 1/diffraction; the Gaussian is below 1e-16 beyond 8.6/(2 pi sigma)
         end = min(1.0 / diffraction_nm, 8.6 / (2.0 * math.pi * sigma_nm))
-        nodes, weights = leggauss(64 + math.ceil(6.0 * end * reach_nm))
-        frequency = (nodes + 1.0) / 2.0 * end
+        frequency, weights = _panels(end, 4 + math.ceil(0.4 * end * reach_nm))
         spread = (1.0 - frequency * diffraction_nm) * np.exp(-2.0 * (math.pi * sigma_nm * frequency) ** 2)
         turn = 2.0j * math.pi * frequency
         # a one-sided exponential tail, its mean taken off so that the line stays where it is
-        spectrum = spread * np.exp(turn * tail_nm) / (1.0 + turn * tail_nm) * (weights * end / 2.0)
-        wave = np.exp(np.outer(grid, turn))
-        self._grid = grid
+        spectrum = spread * np.exp(turn * tail_nm) / (1.0 + turn * tail_nm) * weights
+        # the grid is even, so a wave on it is a product of two short ones; einsum's plain sums, as the last
+        # bits of a matrix product depend on the machine's BLAS
+        coarse = np.exp(np.outer(first_nm + np.arange(blocks) * (_BLOCK * step), turn))
+        fine = np.exp(np.outer(np.arange(_BLOCK) * step, turn))
+        self._first_nm = centre_nm + first_nm
         self._step = step
-        self._value = 0.5 + np.imag(wave @ (spectrum / (math.pi * frequency)))
-        self._slope = 2.0 * np.real(wave @ spectrum)
+        self._slope = 2.0 * np.einsum("bf,cf->bc", coarse * spectrum, fine).real.ravel()
+        waves = np.einsum("bf,cf->bc", coarse * (spectrum / (math.pi * frequency)), fine)
+        self._value = 0.5 + waves.imag.ravel()
 
     def __call__(self, path_difference_nm: FloatArray) -> FloatArray:
-        place = (path_difference_nm - self._centre_nm - self._grid[0]) / self._step
-        cell = np.clip(place.astype(np.int64), 0, self._grid.size - 2)
+        place = (path_difference_nm - self._first_nm) / self._step
+        cell = np.clip(place.astype(np.int64), 0, self._value.size - 2)
         u = np.clip(place - cell, 0.0, 1.0)
         low, high = self._value[cell], self._value[cell + 1]
         rise_low, rise_high = self._slope[cell] * self._step, self._slope[cell + 1] * self._step

@@ -11,7 +11,7 @@ The world never acts by itself: it answers what is true at a moment, and the in-
 from __future__ import annotations
 
 import math
-from typing import Any, Protocol
+from typing import Any, NamedTuple, Protocol
 
 import numpy as np
 from pydantic import Field
@@ -19,7 +19,7 @@ from pydantic import Field
 from drivers.clock import Clock
 from drivers.protocols import DriverContext
 from drivers.settings import ListOf, StrictModel, parse_options
-from simulators.air import Air, AirOptions, bench_wavelength_nm
+from simulators.air import Air, AirOptions, bench_wavelength_nm, standard_refractivity
 from simulators.detector import Counter, DetectorOptions
 from simulators.draw import Draws
 from simulators.faults import Fault, FaultScript
@@ -60,6 +60,14 @@ class SimulatedBench(Protocol):
         ...
 
 
+class Emission(NamedTuple):
+    """One line of the lamp as it meets the spectrometer."""
+
+    strength_per_s: float
+    refractivity: float  # n - 1 of standard air at its wavelength
+    profile: LineProfile
+
+
 class World:
     """Everything that is true about the simulated bench. Moments are monotonic ns of its clock."""
 
@@ -91,8 +99,9 @@ class World:
         )
         self._mean_density = self.air.mean_density_ratio()
         self.lines = tuple(
-            (
+            Emission(
                 line.strength_per_s,
+                standard_refractivity(line.wavelength_air_nm),
                 LineProfile(
                     self.spectrometer,
                     wavelength_nm=bench_wavelength_nm(
@@ -109,11 +118,12 @@ class World:
         gain = self.lamp.gain(utc_s)
         if gain == 0.0:
             return 0.0
-        # denser air shortens every wavelength by the same tiny fraction; sin(rotation) follows it
-        stretch = -2.78e-4 * (self.air.density_ratio(utc_s) - self._mean_density)
+        # denser air shortens a wavelength by a tiny fraction; the sine of its rotation follows
+        denser = self.air.density_ratio(utc_s) - self._mean_density
         rate = sum(
-            strength * profile.share(rotation_rad - profile.rotation_rad - stretch * profile.tangent)
-            for strength, profile in self.lines
+            strength
+            * profile.share(rotation_rad - profile.rotation_rad + refractivity * denser * profile.tangent)
+            for strength, refractivity, profile in self.lines
         )
         exit_nm = self._exit_cosine_nm * math.cos(rotation_rad) + self._exit_sine_nm * math.sin(rotation_rad)
         rate += self.options.lamp.continuum_per_s_per_nm * exit_nm
@@ -159,7 +169,7 @@ class World:
                 "recorded_fwhm_pm": profile.fwhm_nm * 1e3,
                 "bandpass_pm": [w * 1e3 for w in self.spectrometer.bandpass_nm(line.wavelength_air_nm)],
             }
-            for line, (_, profile) in zip(self.options.lamp.lines, self.lines, strict=True)
+            for line, (_, _, profile) in zip(self.options.lamp.lines, self.lines, strict=True)
         ]
         return {
             "lines": lines,

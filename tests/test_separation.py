@@ -1,4 +1,4 @@
-"""Separations in every unit: published doublets, exact constants, uncertainties against a seeded simulation."""
+"""Separations in every unit: published doublets, exact constants, uncertainties against a simulation."""
 
 from __future__ import annotations
 
@@ -88,11 +88,12 @@ def test_air_and_vacuum_tell_the_same() -> None:
 
 
 @pytest.mark.parametrize("medium", ["air", "vacuum"])
-def test_uncertainties_against_a_simulation(medium: str) -> None:
+@pytest.mark.parametrize(("low", "high"), [(577.0, 579.1), (852.35, 894.59), (300.0, 600.0)])
+def test_uncertainties_against_a_simulation(medium: str, low: float, high: float) -> None:
     """Shift the two lines apart at random (Philox seed 11): the spread of every unit is its `u_`."""
     seed, n = 11, 20_000
     rng = np.random.Generator(np.random.Philox(seed))
-    low, high, u = 577.0, 579.1, 0.02
+    u = 0.02
     shift = u * rng.standard_normal(n)
     ones, twos = low - 0.5 * shift, high + 0.5 * shift
     if medium == "air":
@@ -117,7 +118,7 @@ def test_uncertainties_against_a_simulation(medium: str) -> None:
 
 
 def test_common_shift() -> None:
-    """1 pm of scale shift at 313 nm is 2/313 000 of the separation in 1/cm: checked by shifting both lines."""
+    """1 pm of scale shift at 313 nm is 2/313 000 of the separation in 1/cm; checked by shifting both."""
     shift = 0.5
     where = {"u_separation_nm": 0.0, "medium": "vacuum"}
     pair = separation_of(wavelength_1_nm=313.0, wavelength_2_nm=314.0, u_common_nm=shift, **where)  # type: ignore[arg-type]
@@ -137,6 +138,17 @@ def test_below_180_nm_there_is_only_vacuum() -> None:
     assert pair.u_air_pm is None
     assert pair.vacuum_pm == pytest.approx(33.0)
     assert pair.per_cm == pytest.approx(1e7 * (1.0 / 121.534 - 1.0 / 121.567))
+
+
+def test_at_the_border_of_air() -> None:
+    border = separation_of(
+        wavelength_1_nm=180.0, wavelength_2_nm=180.01, u_separation_nm=0.0, medium="vacuum"
+    )
+    assert border.air_pm is None
+    beyond = separation_of(
+        wavelength_1_nm=181.0, wavelength_2_nm=181.01, u_separation_nm=0.0, medium="vacuum"
+    )
+    assert beyond.air_pm == pytest.approx(10.0, rel=1e-3)
 
 
 def test_two_lines_at_one_place() -> None:

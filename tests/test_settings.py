@@ -17,6 +17,7 @@ from typing import Any
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from pydantic import Field
 
 from daq.nightfile import load_night
 from daq.target import Target, load_target, read_target
@@ -25,7 +26,7 @@ from drivers.clock import RealClock
 from drivers.errors import SettingsError
 from drivers.factory import load_factories, load_object, make
 from drivers.protocols import DriverContext
-from drivers.settings import LARGEST_FILE_BYTES, StrictModel, parse, parse_options
+from drivers.settings import LARGEST_FILE_BYTES, ListOf, StrictModel, parse, parse_options
 from drivers.slug import slug_of
 
 BENCH = """\
@@ -291,6 +292,27 @@ def test_a_drivers_own_options_are_told_with_the_bench_file_and_the_whole_key() 
     ]
 
 
+class Gauge(StrictModel):
+    inverted: bool = False
+    port: int | str = 1
+    kind: complex = 0j
+    tags: dict[str, int] = Field(default_factory=dict)
+    zones: ListOf[Turret] = ()
+
+
+def test_other_kinds_of_option_are_told_in_plain_words_too() -> None:
+    options = {"inverted": 1, "port": 1.5, "kind": "x", "tags": {"a": "x"}, "zones": [{"speed_per_s": {}}]}
+    with pytest.raises(SettingsError) as caught:
+        parse_options(Gauge, options, "ambient.options")
+    assert caught.value.problems == [
+        "inverted = 1: must be true or false",
+        'port = 1.5: must be a whole number or text in quotes "..."',
+        "kind = 'x': must be of the kind <class 'complex'>",
+        "tags.a = 'x': must be a whole number",
+        "zones[0].speed_per_s: must be a number, in 1/s",
+    ]
+
+
 NIGHT = 'format = 1\nname = "Night"\n[[runs]]\ntarget = "a.toml"\n[[runs]]\ntarget = "b.toml"\n'
 
 
@@ -327,6 +349,7 @@ def test_a_night_keeps_equal_targets_apart_by_their_ordinals(tmp_path: Path) -> 
             'targt = "b.toml"',
             "runs[1].targt: unknown key 'targt'; did you mean 'target'?",
         ),
+        ('"Night"', '"-"', "name = '-': must hold a letter or a digit: files are named after it"),
         (NIGHT[NIGHT.index("[[") :], "", "runs: missing; must be a list of at least 1"),
         (NIGHT[NIGHT.index("[[") :], "runs = []", "runs = []: must be a list of at least 1"),
         (NIGHT[NIGHT.index("[[") :], "runs = 4", "runs = 4: must be a list of at least 1"),
@@ -376,6 +399,8 @@ def test_defaults_are_the_documented_ones() -> None:
 def test_virtual_start_in_nanoseconds_is_exact() -> None:
     # 2031-02-11T18:00:00Z is 1928599200 s after the epoch (GNU date -u -d '2031-02-11 18:00' +%s)
     assert read_bench(BENCH, "b").time.start_utc_ns == 1_928_599_200_000_000_000
+    real = changed(changed(BENCH, "start_utc = 2031-02-11T18:00:00Z\n", ""), '"virtual"', '"real"')
+    assert read_bench(real, "b").time.start_utc_ns is None
     text = changed(BENCH, "18:00:00Z", "18:00:00.123457Z")
     assert read_bench(text, "b").time.start_utc_ns == 1_928_599_200_123_457_000
 
@@ -406,7 +431,18 @@ Toml = st.recursive(
     lambda inner: st.lists(inner, max_size=3) | st.dictionaries(st.text(max_size=8), inner, max_size=3),
     max_leaves=8,
 )
-KEYS = "format name wavelength_air_nm window model sweep goal limits dwell_s decide time_s runs".split()
+KEYS = [
+    "format",
+    "name",
+    "wavelength_air_nm",
+    "window",
+    "model",
+    "sweep",
+    "goal",
+    "limits",
+    "decide",
+    "time_s",
+]
 
 
 @settings(max_examples=200, deadline=None)

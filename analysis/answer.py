@@ -1,0 +1,277 @@
+"""From fits and claims to an answer: numbers with their budget, flags, sentences, what is excluded."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from analysis.counting import FloatArray
+from analysis.exclusion import exclusion_curve
+from analysis.fit import FitResult, inverse
+from analysis.model import FeatureModel
+from analysis.profile import observed_fwhm
+from analysis.question import Budget, Exclusion, Look, Question
+
+POOR_FIT_SIGMAS = 4.753
+"""One-sided normal quantile of 1e-6."""
+
+
+@dataclass(frozen=True, slots=True)
+class Claims:
+    """Evidence for either claim, natural logs: now, what it must reach, the most it reached, numerators."""
+
+    log_e_pair: float
+    log_e_single: float
+    bound_pair: float
+    bound_single: float
+    max_log_e_pair: float
+    max_log_e_single: float
+    log_numerator_pair: float
+    log_numerator_single: float
+
+    @staticmethod
+    def carried(previous: Look) -> Claims:
+        """The same as before: nothing was counted since."""
+        return Claims(
+            previous.log_e_pair,
+            previous.log_e_single,
+            previous.bound_pair,
+            previous.bound_single,
+            previous.max_log_e_pair,
+            previous.max_log_e_single,
+            previous.log_numerator_pair,
+            previous.log_numerator_single,
+        )
+
+
+def misfit_sigmas(model: FeatureModel, made: FitResult) -> float:
+    """How far chi square lies above what noise and the shape allowance let expect, in normal sigmas.
+
+    Wilson and Hilferty 1931 (PNAS 17, 684) on a chi square scaled to the mean and variance that Pearson's
+    statistic has: at m expected counts a position adds 2 + 1/m, not 2, to the variance. A shape error of the
+    allowance, fraction of the line's counts there, counts as noise here.
+    """
+    sigma2 = made.mean if model.sigma is None else model.sigma**2
+    light = model.line_light(made.values)
+    peak = float(light.max(initial=0.0))
+    allowed = np.zeros(sigma2.size)
+    # half of the allowance at the flanks' foot, all of it at the peak: the modes are of that kind
+    allowed[: light.size] = (model.feature.shape_allowance * np.sqrt(np.abs(light) * peak)) ** 2
+    spread = sigma2 + allowed
+    chi2 = float(np.sum((model.data - made.mean) ** 2 / spread))
+    extra = np.sum((sigma2 / spread) ** 2 / made.mean) if model.sigma is None else 0.0
+    dof = float(made.dof)
+    variance = 2.0 * dof + float(extra)
+    shape = 2.0 * dof**2 / variance
+    third = 2.0 / (9.0 * shape)
+    return float(((chi2 / dof) ** (1.0 / 3.0) - (1.0 - third)) / np.sqrt(third))
+
+
+def separation_budget(
+    model: FeatureModel, made: FitResult, *, scale_relative_uncertainty: float, spread: float = 1.0
+) -> Budget:
+    """Separation's standard uncertainties: counting, shape modes, wavelength scale.
+
+    The shape's share is what the covariance loses when the modes are taken as known. spread : factor on the
+    statistical part where chi square says that the data scatter more than stated.
+    """
+    place = model.index["separation_nm"]
+    whole = made.covariance[place, place]
+    _, jacobian = model.evaluate(made.values)
+    weight = 1.0 / made.mean if model.sigma is None else 1.0 / model.sigma**2
+    pull = np.where(np.isfinite(model.prior_sd), 1.0 / model.prior_sd**2, 0.0)
+    information = (jacobian * weight[:, None]).T @ jacobian + np.diag(pull)
+    rest = np.array([name not in ("skewness", "kurtosis") for name in model.names])
+    rest &= np.diag(information) > 0.0
+    where = int(np.sum(rest[:place]))
+    counting = inverse(information[np.ix_(rest, rest)])[where, where] if rest[place] else whole
+    shape = max(whole - counting, 0.0)
+    separation = abs(made.value("separation_nm"))
+    return Budget(
+        statistics_nm=float(spread * np.sqrt(counting)),
+        shape_nm=float(np.sqrt(shape)),
+        scale_nm=scale_relative_uncertainty * separation,
+    )
+
+
+def describe(
+    *,
+    number: int,
+    question: Question,
+    claims: Claims,
+    model_1: FeatureModel,
+    model_2: FeatureModel,
+    single: FitResult,
+    pair: FitResult,
+    predictive_pair: list[FloatArray],
+    predictive_single: list[FloatArray],
+    flags: list[str],
+    spread: float = 1.0,
+    reasons: tuple[str, ...] = (),
+) -> Look:
+    """Put the answer together. spread : factor on statistical uncertainties (misfit of recorded spectra)."""
+    said_pair = claims.max_log_e_pair >= claims.bound_pair
+    said_single = claims.max_log_e_single >= claims.bound_single
+    feature = question.feature
+    if said_pair and said_single:
+        flags.append("conflict")
+    chosen_model, chosen = (model_1, single) if said_single and not said_pair else (model_2, pair)
+    if misfit_sigmas(chosen_model, chosen) > POOR_FIT_SIGMAS:
+        flags.append("poor-fit")
+    if not (single.converged and pair.converged):
+        flags.append("not-converged")
+    blocked = {"conflict", "poor-fit", "dead-time-load"} & set(flags)
+    verdict = "undecided"
+    if not blocked and said_pair:
+        verdict = "pair"
+    elif not blocked and said_single:
+        verdict = "single"
+
+    numbers = _pair_numbers(model_2, pair, question, spread)
+    widths = chosen if verdict == "single" else pair
+    where = model_1 if verdict == "single" else model_2
+    sigma, gamma = widths.value("sigma_nm"), where.value(widths.values, "gamma_nm")
+    fwhm = observed_fwhm(sigma_nm=sigma, gamma_nm=gamma, box_widths_nm=feature.box_widths_nm)
+    if fwhm > 1.15 * feature.fwhm_nm:
+        flags.append("broader-than-expected")
+    if fwhm < 0.85 * feature.fwhm_nm:
+        flags.append("narrower-than-expected")
+    excluded = exclusion_curve(model_1, single, question, spread)
+    base_name = where.background.names[0] if where.background is not None else ""
+    goal = question.separation_uncertainty_nm
+    reached = verdict == "single"
+    if verdict == "pair":
+        reached = goal is None or (numbers.u_nm is not None and numbers.u_nm <= goal)
+    centre, centre_u = numbers.centre_nm, numbers.centre_u_nm
+    if verdict == "single":
+        centre, centre_u = single.value("centre_nm"), spread * single.deviation("centre_nm")
+    look = Look(
+        number=number,
+        verdict=verdict,
+        goal_reached=reached,
+        separation_nm=numbers.separation_nm,
+        separation_u_nm=numbers.u_nm,
+        budget=numbers.budget,
+        ratio=numbers.ratio,
+        ratio_u=numbers.ratio_u,
+        centre_nm=centre,
+        centre_u_nm=centre_u,
+        second_nm=numbers.second_nm,
+        sigma_nm=sigma,
+        gamma_nm=gamma,
+        fwhm_nm=fwhm,
+        fwhm_u_nm=_fwhm_u(where, widths, spread),
+        background_per_s=where.background_rate(widths.values, centre),
+        background_u_per_s=spread * widths.deviation(base_name),
+        dark_per_s=widths.value("dark_per_s") if where.has_dark else None,
+        dark_u_per_s=widths.deviation("dark_per_s") if where.has_dark else None,
+        single=single.summary(),
+        pair=pair.summary(),
+        log_e_pair=claims.log_e_pair,
+        log_e_single=claims.log_e_single,
+        bound_pair=float(claims.bound_pair),
+        bound_single=float(claims.bound_single),
+        max_log_e_pair=claims.max_log_e_pair,
+        max_log_e_single=claims.max_log_e_single,
+        log_numerator_pair=claims.log_numerator_pair,
+        log_numerator_single=claims.log_numerator_single,
+        predictive_pair=tuple(tuple(float(v) for v in values) for values in predictive_pair),
+        predictive_single=tuple(tuple(float(v) for v in values) for values in predictive_single),
+        window_nm=(float(model_2.x[0]), float(model_2.x[-1])),
+        exclusion=excluded,
+        flags=tuple(flags),
+        evidence=(),
+    )
+    return explain(look, question, model_1, model_2, reasons)
+
+
+@dataclass(frozen=True, slots=True)
+class _PairNumbers:
+    """The pair with the stronger line first; None where the second line has no strength."""
+
+    separation_nm: float | None
+    u_nm: float | None
+    budget: Budget | None
+    ratio: float | None
+    ratio_u: float | None
+    centre_nm: float
+    centre_u_nm: float
+    second_nm: float | None
+
+
+def _pair_numbers(model: FeatureModel, pair: FitResult, question: Question, spread: float) -> _PairNumbers:
+    ratio, separation = pair.value("ratio"), pair.value("separation_nm")
+    centre, centre_u = pair.value("centre_nm"), spread * pair.deviation("centre_nm")
+    if not ratio > 1e-6:
+        return _PairNumbers(None, None, None, None, None, centre, centre_u, None)
+    budget = separation_budget(
+        model, pair, scale_relative_uncertainty=question.scale_relative_uncertainty, spread=spread
+    )
+    u = float(np.sqrt(budget.statistics_nm**2 + budget.shape_nm**2 + budget.scale_nm**2))
+    ratio_u = spread * pair.deviation("ratio")
+    second = centre + separation
+    if ratio > 1.0:
+        places = [model.index["centre_nm"], model.index["separation_nm"]]
+        other_u = spread * float(np.sqrt(max(pair.covariance[np.ix_(places, places)].sum(), 0.0)))
+        centre, centre_u, second = second, other_u, centre
+        ratio, ratio_u = 1.0 / ratio, ratio_u / ratio**2
+    return _PairNumbers(abs(separation), u, budget, ratio, ratio_u, centre, centre_u, second)
+
+
+def _fwhm_u(model: FeatureModel, made: FitResult, spread: float) -> float:
+    """Standard uncertainty of the observed FWHM, by the numerical gradient in sigma and gamma."""
+    boxes = model.feature.box_widths_nm
+    names = [name for name in ("sigma_nm", "gamma_nm") if name in model.index]
+    at = {name: made.value(name) for name in names}
+
+    def width(values: dict[str, float]) -> float:
+        sigma, gamma = values["sigma_nm"], values.get("gamma_nm", 0.0)
+        return observed_fwhm(sigma_nm=sigma, gamma_nm=gamma, box_widths_nm=boxes)
+
+    step = 1e-3 * model.feature.fwhm_nm
+    base = width(at)
+    gradient = np.array([(width(at | {name: at[name] + step}) - base) / step for name in names])
+    places = [model.index[name] for name in names]
+    return float(spread * np.sqrt(max(gradient @ made.covariance[np.ix_(places, places)] @ gradient, 0.0)))
+
+
+def explain(
+    look: Look, question: Question, model_1: FeatureModel, model_2: FeatureModel, reasons: tuple[str, ...]
+) -> Look:
+    """The same look with its evidence as sentences."""
+    from dataclasses import replace
+
+    said = list(reasons)
+    pm = 1e3
+    if look.verdict == "pair" and look.separation_nm is not None and look.separation_u_nm is not None:
+        said.append(
+            f"two lines, {look.separation_nm * pm:.3g} +- {look.separation_u_nm * pm:.2g} pm apart, "
+            f"strengths 1 : {look.ratio:.3g}"
+        )
+    if look.verdict == "single":
+        said.append(
+            f"one line: a second one of at least {question.smallest_ratio:g} of its strength, "
+            f"{question.smallest_separation_nm * pm:.3g} pm or more away, is excluded"
+        )
+    said.append(
+        f"evidence for two lines {look.max_log_e_pair:.1f} of {look.bound_pair:.1f} needed, "
+        f"for one {look.max_log_e_single:.1f} of {look.bound_single:.1f}"
+    )
+    sentences = {
+        "conflict": "the evidence reached both bounds: the line shape or the light was not what it is taken for",
+        "poor-fit": "neither one nor two lines describe the data",
+        "not-converged": "a fit did not settle; look at the spectrum",
+        "dead-time-load": "counts come too fast for the dead-time correction: take light away",
+        "broader-than-expected": "the line is over 15 % broader than the instrument and lamp let expect",
+        "narrower-than-expected": "the line is over 15 % narrower than the instrument and lamp let expect",
+        "known-lines-found": "further peaks in the window were fitted as lines of free strength",
+        "window-cut": "only the part of the window around the main peak was used",
+    }
+    said += [sentences[flag] for flag in look.flags if flag in sentences]
+    if look.budget is not None and look.budget.shape_nm > look.budget.statistics_nm:
+        said.append("the line shape, not the light, limits the separation: more light does not help")
+    return replace(look, evidence=tuple(said))
+
+
+__all__ = ["Claims", "Exclusion", "describe", "explain", "misfit_sigmas", "separation_budget"]

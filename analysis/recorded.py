@@ -1,0 +1,1 @@
+weigh_once = guess_feature = None

@@ -1,0 +1,186 @@
+"""Looking again: a run's file re-analysed from its own records, or a measured spectrum weighed once."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Mapping
+from dataclasses import dataclass, replace
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from analysis.counting import Counts
+from analysis.question import Question, to_json
+from analysis.verdict import guess_feature, weigh_once
+from daq.looks import answer
+from daq.machine import Machine, StartLook
+from daq.plan import in_medium
+from daq.records import Body, Kind
+from daq.runfile import RunData, read_run
+from daq.spectrum import Spectrum, read_spectrum
+from daq.summary import separation_in_all_units, verdict_fields
+from daq.target import LoadedTarget
+from drivers.errors import DataError
+
+HDF5_ENDINGS = frozenset({".h5", ".hdf5", ".nxs"})
+
+
+@dataclass(frozen=True, slots=True)
+class Asked:
+    """What the user says about a measured spectrum, all of it optional.
+
+    Wavelengths are nm on the file's own scale. `target` brings its line, its known lines, its model and goal.
+    """
+
+    target: LoadedTarget | None = None
+    line_nm: float | None = None
+    known_lines_nm: tuple[float, ...] = ()
+    false_alarm: float = 1e-3
+
+
+def analyse(path: Path, asked: Asked) -> dict[str, Any]:
+    """One file's summary. Raises DataError naming the file when it cannot be used."""
+    if path.suffix.lower() in HDF5_ENDINGS:
+        return _analyse_run(read_run(path))
+    return _analyse_spectrum(read_spectrum(path), asked)
+
+
+# ---- a run ----------------------------------------------------------------------------------------------
+
+
+def _analyse_run(run: RunData) -> dict[str, Any]:
+    """The run's looks and its conclusion computed anew, cold, from the records in the file alone."""
+    machine, look = redo(run)
+    recorded = None if run.conclusion is None else run.conclusion["look"]
+    return {
+        "target": run.head["target"]["name"],
+        **verdict_fields(look),
+        "stop_reason": None if run.conclusion is None else run.conclusion["stop_reason"],
+        "bench_time_s": machine.bench_ns * 1e-9,
+        "light_s": machine.light_ns * 1e-9,
+        "points": machine.points,
+        "medium": run.head["plan"]["medium"],
+        "separation": None if look is None else separation_in_all_units(look, run.head["plan"]["medium"]),
+        "run_id": run.head["run_id"],
+        "reproduces": _reproduces(recorded, look),
+        "file": str(run.path.absolute()),
+    }
+
+
+def redo(run: RunData) -> tuple[Machine, dict[str, Any] | None]:
+    """The machine folded over the records, each look's answer computed instead of taken from the file.
+
+    Returns it with the final look (None if nothing was counted). Looks that the records do not use (asked
+    before a crash, say) are not computed.
+    """
+    machine = Machine(run.head["plan"])
+    asked: dict[int, StartLook] = {}
+    for record in run.records():
+        if record.kind in (Kind.HEAD, Kind.CONCLUSION):
+            continue
+        body: Body = record.body
+        if record.kind == Kind.LOOK and body["horizon"] in asked:
+            body = {**body, "look": answer(run.head, asked.pop(body["horizon"]))}
+        for effect in machine.step(record.kind, body):
+            if isinstance(effect, StartLook) and not effect.final:
+                asked[effect.horizon] = effect
+    final = machine.look_request(final=True)
+    return machine, answer(run.head, final) if final.now.rows else None
+
+
+def _reproduces(recorded: Mapping[str, Any] | None, look: Mapping[str, Any] | None) -> str:
+    """How the re-analysis compares with the conclusion in the file."""
+    if recorded is None or look is None:
+        return "nothing to compare"
+    if json.dumps(recorded, sort_keys=True) == json.dumps(look, sort_keys=True):
+        return "bit-equal"
+    was, now = _numbers(recorded), _numbers(look)
+    if was.shape != now.shape:
+        return "different"
+    scale = np.maximum(np.abs(was), np.abs(now))
+    worst = float(np.max(np.abs(was - now) / np.where(scale > 0, scale, 1.0), initial=0.0))
+    return f"within {worst:.1e} relative"
+
+
+def _numbers(value: Any) -> Any:
+    """Every number in a JSON value, in the order of its keys."""
+    found: list[float] = []
+
+    def walk(item: Any) -> None:
+        if isinstance(item, Mapping):
+            for key in sorted(item):
+                walk(item[key])
+        elif isinstance(item, (list, tuple)):
+            for part in item:
+                walk(part)
+        elif isinstance(item, (int, float)):
+            found.append(float(item))
+
+    walk(value)
+    return np.array(found)
+
+
+# ---- a measured spectrum --------------------------------------------------------------------------------
+
+
+def counts_of_spectrum(spectrum: Spectrum) -> Counts:
+    """One position a row, one second each, no dead time left to correct."""
+    rows = spectrum.wavelength_nm.size
+    return Counts(
+        wavelength_nm=np.array(spectrum.wavelength_nm),
+        counts=np.array(spectrum.counts),
+        gate_s=np.ones(rows),
+        group=np.zeros(rows, dtype=np.int64),
+        sigma=None if spectrum.sigma is None else np.array(spectrum.sigma),
+    )
+
+
+def _analyse_spectrum(spectrum: Spectrum, asked: Asked) -> dict[str, Any]:
+    counts = counts_of_spectrum(spectrum)
+    try:
+        question = _question(spectrum, counts, asked)
+        look = to_json(weigh_once(counts, question))
+    except ValueError as error:
+        raise DataError(f"{spectrum.path}: {error}") from error
+    target = asked.target
+    return {
+        "target": Path(spectrum.path).stem if target is None else target.target.name,
+        **verdict_fields(look),
+        "stop_reason": None,
+        "bench_time_s": None,
+        "light_s": None,
+        "points": int(spectrum.wavelength_nm.size),
+        "medium": spectrum.medium,
+        "separation": separation_in_all_units(look, spectrum.medium),
+        "run_id": None,
+        "reproduces": None,
+        "file": str(Path(spectrum.path).absolute()),
+    }
+
+
+def _question(spectrum: Spectrum, counts: Counts, asked: Asked) -> Question:
+    target = asked.target
+    line_nm, known_nm = asked.line_nm, asked.known_lines_nm
+    if target is not None:
+        given = target.target
+        line_nm = in_medium(given.wavelength_nm, given.medium, spectrum.medium, at_bench=False)
+        known_nm = tuple(
+            in_medium(w, given.medium, spectrum.medium, at_bench=False) for w in given.known_lines_nm
+        )
+    feature = guess_feature(counts, wavelength_nm=line_nm, known_lines_nm=known_nm)
+    decide = None if target is None else target.target.goal.decision
+    if target is not None:
+        model = target.target.model
+        feature = replace(feature, shape=model.shape, widths=model.widths, background=model.background)
+    smallest_pm = None if decide is None else decide.smallest_separation_pm
+    goal_pm = None if target is None else target.target.goal.separation_uncertainty_pm
+    return Question(
+        feature=feature,
+        false_alarm=asked.false_alarm if decide is None else decide.false_alarm,
+        smallest_separation_nm=feature.fwhm_nm if smallest_pm is None else 1e-3 * smallest_pm,
+        smallest_ratio=0.1 if decide is None else decide.smallest_ratio,
+        miss_probability=0.05 if decide is None else decide.miss_probability,
+        separation_uncertainty_nm=None if goal_pm is None else 1e-3 * goal_pm,
+        scale_relative_uncertainty=1e-4,
+    )
