@@ -68,6 +68,13 @@ def misfit_sigmas(model: FeatureModel, made: FitResult) -> float:
     return float(((chi2 / dof) ** (1.0 / 3.0) - (1.0 - third)) / np.sqrt(third))
 
 
+def _fits_poorly(model: FeatureModel, made: FitResult, residual_limit: float | None) -> bool:
+    if residual_limit is None:
+        return misfit_sigmas(model, made) > POOR_FIT_SIGMAS
+    peak = float(model.line_light(made.values).max(initial=0.0))
+    return float(np.abs(model.data - made.mean).max()) > residual_limit * peak
+
+
 def separation_budget(
     model: FeatureModel, made: FitResult, *, scale_relative_uncertainty: float, spread: float = 1.0
 ) -> Budget:
@@ -108,16 +115,21 @@ def describe(
     predictive_single: list[FloatArray],
     flags: list[str],
     spread: float = 1.0,
+    residual_limit: float | None = None,
     reasons: tuple[str, ...] = (),
 ) -> Look:
-    """Put the answer together. spread : factor on statistical uncertainties (misfit of recorded spectra)."""
+    """Put the answer together.
+
+    spread : factor on statistical uncertainties where readings scatter more than stated. residual_limit : a
+    fit is poor where data stray from it by more than this fraction of the peak; None: where chi square says.
+    """
     said_pair = claims.max_log_e_pair >= claims.bound_pair
     said_single = claims.max_log_e_single >= claims.bound_single
     feature = question.feature
     if said_pair and said_single:
         flags.append("conflict")
     chosen_model, chosen = (model_1, single) if said_single and not said_pair else (model_2, pair)
-    if misfit_sigmas(chosen_model, chosen) > POOR_FIT_SIGMAS:
+    if _fits_poorly(chosen_model, chosen, residual_limit):
         flags.append("poor-fit")
     if not (single.converged and pair.converged):
         flags.append("not-converged")
@@ -222,8 +234,8 @@ def _pair_numbers(model: FeatureModel, pair: FitResult, question: Question, spre
 def _fwhm_u(model: FeatureModel, made: FitResult, spread: float) -> float:
     """Standard uncertainty of the observed FWHM, by the numerical gradient in sigma and gamma."""
     boxes = model.feature.box_widths_nm
-    names = [name for name in ("sigma_nm", "gamma_nm") if name in model.index]
-    at = {name: made.value(name) for name in names}
+    names: list[str] = [name for name in ("sigma_nm", "gamma_nm") if name in model.index]
+    at: dict[str, float] = {name: made.value(name) for name in names}
 
     def width(values: dict[str, float]) -> float:
         sigma, gamma = values["sigma_nm"], values.get("gamma_nm", 0.0)
@@ -259,7 +271,7 @@ def explain(
         f"for one {look.max_log_e_single:.1f} of {look.bound_single:.1f}"
     )
     sentences = {
-        "conflict": "the evidence reached both bounds: the line shape or the light was not what it is taken for",
+        "conflict": "the evidence reached both bounds: line shape or light are not what they are taken for",
         "poor-fit": "neither one nor two lines describe the data",
         "not-converged": "a fit did not settle; look at the spectrum",
         "dead-time-load": "counts come too fast for the dead-time correction: take light away",

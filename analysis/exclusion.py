@@ -52,11 +52,8 @@ def exclusion_curve(
     lines[:, : model.x.size] = area * profile * gain * model.live_s(values)
     cross = (lines * weight) @ jacobian[:, used]
     own = np.sum(lines * lines * weight, axis=1) - np.sum((cross @ covariance) * cross, axis=1)
-    pulled = (pull * (values - model.prior_mean))[used]
-    residual = (lines * weight) @ (model.data - mean)
-    # the other parameters answer too: at the optimum their gradient vanishes unless a bound holds them
-    gradient = (jacobian * weight[:, None]).T[used] @ (model.data - mean) - pulled
-    score = residual - cross @ (covariance @ gradient)
+    # at the optimum the other parameters have no gradient (what a bound holds, it goes on holding)
+    score = (lines * weight) @ (model.data - mean)
     curve = []
     for place, left, push in zip(separations, own, score, strict=True):
         limit = None

@@ -17,7 +17,7 @@ from typing import Protocol
 import numpy as np
 
 from analysis.counting import Counts, FloatArray
-from analysis.profile import FWHM_PER_SIGMA, Profile, ShapeModes, line_profile, mode_width, shape_modes
+from analysis.profile import FWHM_PER_SIGMA, line_profile, mode_width, shape_modes
 from analysis.question import Feature
 
 KNOWN_SHIFT_FWHM = 0.02
@@ -126,7 +126,8 @@ class FeatureModel:
         add("centre_nm", self.x[0], self.x[-1])
         if self.lines == 2:
             add("ratio", 0.0, inf)
-            add("separation_nm", self.x[0] - self.x[-1], self.x[-1] - self.x[0])
+            reach = self.x[-1] - self.x[0] if feature.reach_nm is None else feature.reach_nm
+            add("separation_nm", -reach, reach)
         add("sigma_nm", 0.1 * part / FWHM_PER_SIGMA, 4.0 * fwhm)
         if self.lines == 2 and feature.widths == "free":
             add("sigma2_nm", 0.1 * part / FWHM_PER_SIGMA, 4.0 * fwhm)
@@ -253,11 +254,11 @@ class FeatureModel:
             centres[self.lines :] += values[index["known_shift_nm"]]
         offsets = self.x - centres[:, None]
         sigma, gamma = values[index["sigma_nm"]], self.value(values, "gamma_nm")
-        shapes = [self._shape(offsets, sigma, gamma, values)]
+        shapes = [self._shape(offsets, sigma, gamma, values, derivatives)]
         owner = np.zeros(centres.size, dtype=np.int64)
         if "sigma2_nm" in index:
             owner[1] = 1
-            shapes.append(self._shape(offsets, values[index["sigma2_nm"]], gamma, values))
+            shapes.append(self._shape(offsets, values[index["sigma2_nm"]], gamma, values, derivatives))
         value = np.stack([shapes[own].value[line] for line, own in enumerate(owner)])
         assert self.background is not None
         base, d_base = self.background.evaluate(self.x, self._background_values(values))
@@ -287,40 +288,46 @@ class FeatureModel:
         jacobian[:, start : start + d_base.shape[1]] = d_base
         return light, jacobian
 
-    def _shape(self, offsets: FloatArray, sigma: float, gamma: float, values: FloatArray) -> _Shape:
+    def _shape(
+        self, offsets: FloatArray, sigma: float, gamma: float, values: FloatArray, derivatives: bool
+    ) -> _Shape:
         boxes = self.feature.box_widths_nm
-        profile = line_profile(offsets, sigma_nm=sigma, gamma_nm=gamma, box_widths_nm=boxes)
+        profile = line_profile(
+            offsets, sigma_nm=sigma, gamma_nm=gamma, box_widths_nm=boxes, derivatives=derivatives
+        )
         if "skewness" not in self.index:
             none = np.empty((0, *offsets.shape))
             return _Shape(profile.value, profile.d_offset, profile.d_sigma, profile.d_gamma, none)
         width = mode_width(sigma_nm=sigma, gamma_nm=gamma, box_widths_nm=boxes)
         modes = shape_modes(offsets, width_nm=width)
-        first = self.index["skewness"]
-        return _Shape.of(profile, modes, values[first : first + 2], sigma, gamma, width)
+        skewness, kurtosis = values[self.index["skewness"]], values[self.index["kurtosis"]]
+
+        def mixed(part: FloatArray) -> FloatArray:
+            made: FloatArray = skewness * part[0] + kurtosis * part[1]
+            return made
+
+        value = profile.value + mixed(modes.value)
+        if not derivatives:
+            return _Shape(value, value, value, value, modes.value)
+        d_width = mixed(modes.d_width)
+        return _Shape(
+            value=value,
+            d_offset=profile.d_offset + mixed(modes.d_offset),
+            d_sigma=profile.d_sigma + d_width * (sigma / width),
+            d_gamma=profile.d_gamma + d_width * (gamma / width * (2.0 / FWHM_PER_SIGMA) ** 2),
+            modes=modes.value,
+        )
 
 
 @dataclass(frozen=True, slots=True)
 class _Shape:
-    """Profile and modes together, (L, N) each; modes (2, L, N)."""
+    """Profile and modes together, (L, N) each; modes (2, L, N). Without derivatives only value and modes."""
 
     value: FloatArray
     d_offset: FloatArray
     d_sigma: FloatArray
     d_gamma: FloatArray
     modes: FloatArray
-
-    @staticmethod
-    def of(
-        profile: Profile, modes: ShapeModes, strength: FloatArray, sigma: float, gamma: float, width: float
-    ) -> _Shape:
-        d_width = np.tensordot(strength, modes.d_width, 1)
-        return _Shape(
-            profile.value + np.tensordot(strength, modes.value, 1),
-            profile.d_offset + np.tensordot(strength, modes.d_offset, 1),
-            profile.d_sigma + d_width * (sigma / width),
-            profile.d_gamma + d_width * (gamma / width * (2.0 / FWHM_PER_SIGMA) ** 2),
-            modes.value,
-        )
 
 
 def vector(

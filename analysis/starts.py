@@ -16,7 +16,7 @@ from analysis.fit import FitResult, fit
 from analysis.model import FeatureModel, LinearBackground, neutral
 from analysis.profile import FWHM_PER_SIGMA, line_profile
 
-MOST_PLACES = 40
+MOST_PLACES = 60
 _ROUGH_STEPS = 8
 
 
@@ -60,8 +60,12 @@ def _widths(model: FeatureModel) -> list[tuple[float, float]]:
 
 def _limits(model: FeatureModel, start: FloatArray, within: Bounds | None) -> tuple[FloatArray, FloatArray]:
     low, high = model.lower.copy(), model.upper.copy()
+    ratio, separation = model.index["ratio"], model.index["separation_nm"]
+    # the second line stays where there are data: outside it could be of any strength
+    centre = start[model.index["centre_nm"]]
+    low[separation] = max(low[separation], model.x[0] - centre)
+    high[separation] = min(high[separation], model.x[-1] - centre)
     if within is not None:
-        ratio, separation = model.index["ratio"], model.index["separation_nm"]
         low[ratio], high[ratio] = within.lowest_ratio, within.highest_ratio
         if start[separation] > 0.0:
             low[separation] = within.smallest_separation_nm
@@ -135,6 +139,7 @@ def _gram(model: FeatureModel, width: tuple[float, float]) -> _Gram:
         sigma_nm=width[0],
         gamma_nm=width[1],
         box_widths_nm=feature.box_widths_nm,
+        derivatives=False,
     ).value
     _, base = model.background.evaluate(x, np.zeros(len(model.background.names)))
     columns = np.vstack([lines, base.T]) * live
@@ -169,6 +174,7 @@ def _pair_starts(
     smallest = 0.0 if within is None else within.smallest_separation_nm
     apart = np.abs(gram.places[main] - gram.places[second])
     keep = (main != second) & (apart >= smallest - 0.5 * (gram.places[1] - gram.places[0]))
+    keep &= apart <= model.upper[model.index["separation_nm"]]
     main, second = main[keep], second[keep]
     columns = np.column_stack([main, second, gram.known[main], np.tile(gram.base, (main.size, 1))])
     solution, gain = gram.solve(columns)

@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from analysis.answer import Claims, describe, explain
+from analysis.answer import Claims, describe
 from analysis.counting import LOAD_LIMIT, Counts
 from analysis.evidence import between, log_predicted, log_shares, predictive_sets
 from analysis.fit import FitResult
@@ -52,7 +52,7 @@ def look(evidence: Evidence, question: Question, previous: Look | None) -> Look:
     the first predictions. ValueError if `previous` and `evidence.previous` do not go together.
     """
     if (previous is None) != (evidence.previous is None) or (previous is None) != (evidence.first is None):
-        raise ValueError("the first look has neither earlier counts nor an earlier answer, every later one both")
+        raise ValueError("only the first look has no earlier counts and no earlier answer")
     number = 1 if previous is None else previous.number + 1
     model_1 = FeatureModel(evidence.now, question.feature, 1)
     model_2 = FeatureModel(evidence.now, question.feature, 2)

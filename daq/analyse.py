@@ -86,7 +86,7 @@ def redo(run: RunData) -> tuple[Machine, dict[str, Any] | None]:
             if isinstance(effect, StartLook) and not effect.final:
                 asked[effect.horizon] = effect
     final = machine.look_request(final=True)
-    return machine, answer(run.head, final) if final.now.rows else None
+    return machine, answer(run.head, final) if final.now.can_be_weighed else None
 
 
 def _reproduces(recorded: Mapping[str, Any] | None, look: Mapping[str, Any] | None) -> str:

@@ -57,8 +57,8 @@ def plan_scale(plan: Body) -> Scale:
 
 def fitted_curve(look: Body, head: Body, snapshot: Snapshot, *, kind: str) -> FloatArray:
     """The model rates of a look's fit (see `export_layout.Curve`)."""
-    from analysis.question import Look, Question, from_json
     from analysis.curve import curve
+    from analysis.question import Look, Question, from_json
     from daq.looks import counts_of
 
     # what the record of a look carries beside the look itself

@@ -332,7 +332,7 @@ class Machine:
         self.sweeps_done += 1
         self._visits = next_sweep(self.window, number=self.sweeps_done)
         self._cursor = 0
-        if self.light_ns >= LOOK_RATIO * self._light_at_last_look_ns:
+        if self.tally.can_be_weighed and self.light_ns >= LOOK_RATIO * self._light_at_last_look_ns:
             lag = min(LOOK_LAG_VISITS, len(self._visits) - 1)
             self._pending = _Pending(self.look_request(final=False), visits_left=lag)
             self._light_at_last_look_ns = self.light_ns

@@ -194,10 +194,11 @@ class Runner:
 
     async def _look(self, request: StartLook) -> None:
         look = None
-        try:
-            look = await self._looker.look(request)
-        except Exception as error:
-            self.post(Kind.FAULT, self._fault("look", error))
+        if request.now.can_be_weighed:  # a run that ended early has nothing to weigh
+            try:
+                look = await self._looker.look(request)
+            except Exception as error:
+                self.post(Kind.FAULT, self._fault("look", error))
         if request.final:
             self.post(Kind.CONCLUSION, self._concluded(look))
         elif look is not None:

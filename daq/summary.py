@@ -25,6 +25,7 @@ def conclusion(head: Body, machine: Machine, look: dict[str, Any] | None) -> dic
         "summary": {
             "target": head["target"]["name"],
             **verdict_fields(look),
+            **({} if look is not None else _no_look(machine)),
             "stop_reason": machine.stop,
             "bench_time_s": machine.bench_ns * 1e-9,
             "light_s": machine.light_ns * 1e-9,
@@ -35,6 +36,12 @@ def conclusion(head: Body, machine: Machine, look: dict[str, Any] | None) -> dic
             "file": f"{head['run_id']}.h5",
         },
     }
+
+
+def _no_look(machine: Machine) -> dict[str, Any]:
+    if machine.tally.can_be_weighed:
+        return {"flags": ["analysis-failed"], "evidence": ["the analysis failed; the counts are in the file"]}
+    return {"flags": ["too-few-points"], "evidence": ["too few points were counted for anything to be said"]}
 
 
 def verdict_fields(look: Body | None) -> dict[str, Any]:
@@ -51,7 +58,7 @@ def verdict_fields(look: Body | None) -> dict[str, Any]:
         "separation_u_pm": of_pair("separation_u_nm", 1e3),
         "ratio": of_pair("ratio", 1.0),
         "ratio_u": of_pair("ratio_u", 1.0),
-        "flags": ["analysis-failed"] if look is None else list(look["flags"]),
+        "flags": [] if look is None else list(look["flags"]),
         "evidence": [] if look is None else list(look["evidence"]),
     }
 

@@ -9,6 +9,9 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Any
 
+FEWEST_POSITIONS = 12
+"""A pair on a sloping background has eight parameters; below a dozen positions nothing is weighed."""
+
 
 @dataclass(frozen=True, slots=True)
 class Snapshot:
@@ -17,6 +20,11 @@ class Snapshot:
     rows: tuple[tuple[int, int, int, int], ...]
     dark_counts: int
     dark_gate_ns: int
+
+    @property
+    def can_be_weighed(self) -> bool:
+        """Whether enough positions were counted with the shutter open for a fit to mean anything."""
+        return len(self.rows) >= FEWEST_POSITIONS
 
     def to_json(self) -> dict[str, Any]:
         return {
@@ -42,6 +50,11 @@ class Tally:
         cell = self._light.setdefault((steps, group), [0, 0]) if light else self._dark
         cell[0] += counts
         cell[1] += gate_ns
+
+    @property
+    def can_be_weighed(self) -> bool:
+        """Whether enough positions were counted with the shutter open for a fit to mean anything."""
+        return len(self._light) >= FEWEST_POSITIONS
 
     def snapshot(self) -> Snapshot:
         rows = tuple((steps, group, c[0], c[1]) for (steps, group), c in sorted(self._light.items()))

@@ -133,9 +133,9 @@ class Detector(StrictModel):
     def cross_checks(self) -> Iterator[tuple[str, str]]:
         if self.dead_time_uncertainty_ns > self.dead_time_ns:
             yield "dead_time_uncertainty_ns", f"must be at most dead_time_ns = {self.dead_time_ns:g}"
-        dead = self.highest_rate_per_s * self.dead_time_ns * 1e-9
+        dead = self.highest_rate_per_s * self.dead_time_ns / 1e9
         if dead > LARGEST_DEAD_FRACTION:
-            most = LARGEST_DEAD_FRACTION / (self.dead_time_ns * 1e-9)
+            most = LARGEST_DEAD_FRACTION * 1e9 / self.dead_time_ns
             yield (
                 "highest_rate_per_s",
                 f"with dead_time_ns = {self.dead_time_ns:g} the counter would be dead {dead:.0%} of the time;"

@@ -1,8 +1,9 @@
 """The air the bench stands in: its slow changes, and what they do to a wavelength.
 
 The refractive index follows Edlén 1966 (Metrologia 2, 71; coefficients from memory) for standard air, and
-scales with the density of an ideal gas, moisture after Birch and Downs 1993. That is another formula than the daemon's own: only ratios of
-indices matter here, and over the range of a laboratory the two agree to a few parts in 1e8.
+scales with the density of an ideal gas; moisture follows Birch and Downs 1993 (Metrologia 30, 155; from
+memory). That is another formula than the daemon's own: only ratios of indices matter here, and over the range
+of a laboratory the two agree to a few parts in 1e8.
 """
 
 from __future__ import annotations
@@ -19,7 +20,7 @@ from simulators.draw import Draws, smooth_drift
 
 _STANDARD_TEMPERATURE_K = 288.15
 _STANDARD_PRESSURE_PA = 101325.0
-# Birch and Downs 1993, -(3.7345 - 0.0401/um^2)e-10 near 500 nm (memory); Edlén's own figure was found too large
+# Birch and Downs 1993: -(3.7345 - 0.0401/um^2)e-10, near 500 nm; Edlén's own figure was found too large
 _WATER_REFRACTIVITY_PER_PA = -3.57e-10
 _TYPICAL_REFRACTIVITY = 2.78e-4  # near 500 nm
 

@@ -10,8 +10,6 @@ from pydantic import Field
 from drivers.settings import StrictModel
 from simulators.draw import Draws
 
-_FEW = 24  # below this many candidates they are drawn one by one
-
 
 class DetectorOptions(StrictModel):
     """`[world.options.detector]`"""
@@ -39,7 +37,7 @@ def registered(draw: np.random.Generator, *, rate_per_s: float, gate_s: float, d
     left = int(draw.poisson(rate_per_s * gate_s))
     if dead_time_s == 0.0:
         return left
-    while left > _FEW:
+    while left:
         sure_until = high - left * dead_time_s
         if sure_until <= low:
             break
@@ -50,6 +48,8 @@ def registered(draw: np.random.Generator, *, rate_per_s: float, gate_s: float, d
         new_high = max(gate_s - certain * dead_time_s, low)  # max: against rounding
         left = int(draw.binomial(left, min(1.0, (new_high - low) / (high - low)))) if left else 0
         high = new_high
+    if not left:
+        return certain
     ready_s = np.sort(draw.uniform(low, high, left))
     return certain + int(np.count_nonzero(ready_s <= gate_s - (certain + np.arange(left)) * dead_time_s))
 

@@ -15,7 +15,6 @@ from pydantic import Field
 from drivers.settings import StrictModel
 from simulators.draw import Draws
 
-
 _STILL_STEPS = 0.01  # ringing below this no longer counts as motion
 
 

@@ -172,7 +172,7 @@ class LineProfile:
     """What share of one line passes both slits, against the grating's rotation.
 
     A table on an even grid of rotations, 16 cells to the width of line and diffraction, read by a cubic
-    through four neighbours: within 2e-5 of the peak of the integral it stands for (the tests hold it against
+    through four neighbours: within 2e-6 of the peak of the integral it stands for (the tests hold it against
     brute force). Beyond the table, where only diffraction's wings are left, their mean (the sin^2 replaced by
     1/2) goes on as the inverse square of the distance. The table is laid when it is first asked for: most
     lines of a lamp are never come near.

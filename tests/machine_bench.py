@@ -28,7 +28,7 @@ GATE_NS = 1_000_000_000
 def plan(**changes: Any) -> dict[str, Any]:
     window = {
         "lowest_steps": 0,
-        "highest_steps": 24,
+        "highest_steps": 40,
         "step_steps": 3,
         "groups": 3,
         "dwell_ns": 2 * GATE_NS,

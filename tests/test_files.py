@@ -63,6 +63,14 @@ def test_a_users_own_file_comes_first(tmp_path: Path, monkeypatch: pytest.Monkey
     assert files.resolve("targets/hg-313-pair.toml").resolve() == own
 
 
+def test_a_users_own_folder_is_handed_on_to_be_refused_as_one(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    (tmp_path / "acceptance").mkdir()
+    monkeypatch.chdir(tmp_path)
+    assert files.resolve("acceptance") == Path("acceptance")
+
+
 def test_a_wrong_name_is_answered_with_the_near_ones() -> None:
     with pytest.raises(SettingsError) as caught:
         files.resolve("my/targets/hg-313-par.toml", "targets")

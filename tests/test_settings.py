@@ -158,6 +158,25 @@ def test_one_mistake_is_told_once_with_key_value_and_what_is_allowed(kind: str, 
     assert problem.startswith(row["says"])
 
 
+@pytest.mark.parametrize(
+    ("kind", "old", "new"),
+    [
+        ("target", "= 313.155", "= 10"),
+        ("target", "= 313.155", "= 100000"),
+        ("target", "light_s = 900.0", "light_s = 1800.0"),
+        ("target", "half_width_fwhm = 4.0", "below_pm = 8.0\nabove_pm = 8.0"),
+        ("bench", "highest_rate_per_s = 2e6", "highest_rate_per_s = 1e7"),
+        ("bench", "dead_time_ns = 30.0\ndead_time_uncertainty_ns = 2.0", "dead_time_ns = 0"),
+        ("bench", "dead_time_uncertainty_ns = 2.0", "dead_time_uncertainty_ns = 30"),
+        ("bench", "zero_order_steps = 0", "zero_order_steps = -1000"),
+        ("bench", "included_angle_deg = 22.0", "included_angle_deg = 0"),
+    ],
+)
+def test_the_edge_of_what_is_allowed_is_allowed(kind: str, old: str, new: str) -> None:
+    reader, sample = SAMPLES[kind]
+    reader(changed(sample, old, new), "sample.toml")
+
+
 @pytest.mark.parametrize(("what", "raw", "wanted"), SYNTAX_MISTAKES, ids=ids(SYNTAX_MISTAKES))
 def test_syntax_mistake(what: str, raw: bytes, wanted: list[str], tmp_path: Path) -> None:
     file = tmp_path / "t.toml"
