@@ -2,15 +2,14 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
-from analysis.counting import FloatArray
 from analysis.exclusion import exclusion_curve
 from analysis.fit import FitResult, inverse
 from analysis.model import FeatureModel
-from analysis.profile import observed_fwhm
+from analysis.profile import ObservedWidth, observed_width
 from analysis.question import Budget, Exclusion, Look, Question
 
 POOR_FIT_SIGMAS = 4.753
@@ -111,8 +110,6 @@ def describe(
     model_2: FeatureModel,
     single: FitResult,
     pair: FitResult,
-    predictive_pair: list[FloatArray],
-    predictive_single: list[FloatArray],
     flags: list[str],
     spread: float = 1.0,
     residual_limit: float | None = None,
@@ -128,27 +125,26 @@ def describe(
     feature = question.feature
     if said_pair and said_single:
         flags.append("conflict")
-    chosen_model, chosen = (model_1, single) if said_single and not said_pair else (model_2, pair)
-    if _fits_poorly(chosen_model, chosen, residual_limit):
+    where, chosen = (model_1, single) if said_single and not said_pair else (model_2, pair)
+    if _fits_poorly(where, chosen, residual_limit):
         flags.append("poor-fit")
     if not (single.converged and pair.converged):
         flags.append("not-converged")
-    blocked = {"conflict", "poor-fit", "dead-time-load"} & set(flags)
-    verdict = "undecided"
-    if not blocked and said_pair:
-        verdict = "pair"
-    elif not blocked and said_single:
-        verdict = "single"
-
-    numbers = _pair_numbers(model_2, pair, question, spread)
-    widths = chosen if verdict == "single" else pair
-    where = model_1 if verdict == "single" else model_2
-    sigma, gamma = widths.value("sigma_nm"), where.value(widths.values, "gamma_nm")
-    fwhm = observed_fwhm(sigma_nm=sigma, gamma_nm=gamma, box_widths_nm=feature.box_widths_nm)
-    if fwhm > 1.15 * feature.fwhm_nm:
+    sigma, gamma = chosen.value("sigma_nm"), where.value(chosen.values, "gamma_nm")
+    width = observed_width(sigma_nm=sigma, gamma_nm=gamma, box_widths_nm=feature.box_widths_nm)
+    fwhm, fwhm_u = width.fwhm_nm, _fwhm_u(where, chosen, width, spread)
+    if fwhm - 2.0 * fwhm_u > 1.15 * feature.fwhm_nm:
         flags.append("broader-than-expected")
-    if fwhm < 0.85 * feature.fwhm_nm:
+    if fwhm + 2.0 * fwhm_u < 0.85 * feature.fwhm_nm:
         flags.append("narrower-than-expected")
+    verdict = "undecided"
+    if not {"conflict", "poor-fit", "dead-time-load"} & set(flags):
+        if said_pair:
+            verdict = "pair"
+        elif said_single and "broader-than-expected" not in flags:
+            # a broad line may be two lines closer than the question asks about
+            verdict = "single"
+    numbers = _pair_numbers(model_2, pair, question, spread)
     excluded = exclusion_curve(model_1, single, question, spread)
     base_name = where.background.names[0] if where.background is not None else ""
     goal = question.separation_uncertainty_nm
@@ -173,11 +169,11 @@ def describe(
         sigma_nm=sigma,
         gamma_nm=gamma,
         fwhm_nm=fwhm,
-        fwhm_u_nm=_fwhm_u(where, widths, spread),
-        background_per_s=where.background_rate(widths.values, centre),
-        background_u_per_s=spread * widths.deviation(base_name),
-        dark_per_s=widths.value("dark_per_s") if where.has_dark else None,
-        dark_u_per_s=widths.deviation("dark_per_s") if where.has_dark else None,
+        fwhm_u_nm=fwhm_u,
+        background_per_s=where.background_rate(chosen.values, centre),
+        background_u_per_s=spread * chosen.deviation(base_name),
+        dark_per_s=chosen.value("dark_per_s") if where.has_dark else None,
+        dark_u_per_s=chosen.deviation("dark_per_s") if where.has_dark else None,
         single=single.summary(),
         pair=pair.summary(),
         log_e_pair=claims.log_e_pair,
@@ -188,8 +184,6 @@ def describe(
         max_log_e_single=claims.max_log_e_single,
         log_numerator_pair=claims.log_numerator_pair,
         log_numerator_single=claims.log_numerator_single,
-        predictive_pair=tuple(tuple(float(v) for v in values) for values in predictive_pair),
-        predictive_single=tuple(tuple(float(v) for v in values) for values in predictive_single),
         window_nm=(float(model_2.x[0]), float(model_2.x[-1])),
         exclusion=excluded,
         flags=tuple(flags),
@@ -231,20 +225,11 @@ def _pair_numbers(model: FeatureModel, pair: FitResult, question: Question, spre
     return _PairNumbers(abs(separation), u, budget, ratio, ratio_u, centre, centre_u, second)
 
 
-def _fwhm_u(model: FeatureModel, made: FitResult, spread: float) -> float:
-    """Standard uncertainty of the observed FWHM, by the numerical gradient in sigma and gamma."""
-    boxes = model.feature.box_widths_nm
-    names: list[str] = [name for name in ("sigma_nm", "gamma_nm") if name in model.index]
-    at: dict[str, float] = {name: made.value(name) for name in names}
-
-    def width(values: dict[str, float]) -> float:
-        sigma, gamma = values["sigma_nm"], values.get("gamma_nm", 0.0)
-        return observed_fwhm(sigma_nm=sigma, gamma_nm=gamma, box_widths_nm=boxes)
-
-    step = 1e-3 * model.feature.fwhm_nm
-    base = width(at)
-    gradient = np.array([(width(at | {name: at[name] + step}) - base) / step for name in names])
-    places = [model.index[name] for name in names]
+def _fwhm_u(model: FeatureModel, made: FitResult, width: ObservedWidth, spread: float) -> float:
+    """Standard uncertainty of the observed FWHM from the covariance of sigma and gamma."""
+    slopes = {"sigma_nm": width.d_sigma, "gamma_nm": width.d_gamma}
+    places = [model.index[name] for name in slopes if name in model.index]
+    gradient = np.array([slope for name, slope in slopes.items() if name in model.index])
     return float(spread * np.sqrt(max(gradient @ made.covariance[np.ix_(places, places)] @ gradient, 0.0)))
 
 
@@ -252,8 +237,6 @@ def explain(
     look: Look, question: Question, model_1: FeatureModel, model_2: FeatureModel, reasons: tuple[str, ...]
 ) -> Look:
     """The same look with its evidence as sentences."""
-    from dataclasses import replace
-
     said = list(reasons)
     pm = 1e3
     if look.verdict == "pair" and look.separation_nm is not None and look.separation_u_nm is not None:
@@ -277,7 +260,7 @@ def explain(
         "dead-time-load": "counts come too fast for the dead-time correction: take light away",
         "broader-than-expected": "the line is over 15 % broader than the instrument and lamp let expect",
         "narrower-than-expected": "the line is over 15 % narrower than the instrument and lamp let expect",
-        "known-lines-found": "further peaks in the window were fitted as lines of free strength",
+        "foreign-line": "a foreign line reaches into the window: give it as a known line",
         "window-cut": "only the part of the window around the main peak was used",
     }
     said += [sentences[flag] for flag in look.flags if flag in sentences]

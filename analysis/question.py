@@ -112,8 +112,8 @@ class Look:
     separation_nm : >= 0. centre_nm is the stronger line, second_nm the weaker one, ratio = weaker/stronger
     in area. sigma_nm and gamma_nm are the Voigt part, fwhm_nm the whole observed single line.
     log_e_* : evidence for each claim, natural log; max_* the running maxima held against bound_*.
-    log_numerator_* : sums of predictive log densities; predictive_* : (K, P) parameter sets that predict
-    the next block, in the order of single.names and pair.names.
+    log_numerator_* : sums of predictive log densities; the next block is predicted by the values of single
+    and pair, whose background is anchored at the two ends of window_nm.
     """
 
     number: int
@@ -145,8 +145,6 @@ class Look:
     max_log_e_single: float
     log_numerator_pair: float
     log_numerator_single: float
-    predictive_pair: tuple[tuple[float, ...], ...]
-    predictive_single: tuple[tuple[float, ...], ...]
     window_nm: tuple[float, float]
     exclusion: tuple[Exclusion, ...]
     flags: tuple[str, ...]

@@ -85,9 +85,15 @@ def weigh_once(counts: Counts, question: Question) -> Look:
     scatter = max(1.0, -2.0 * best.log_likelihood / best.dof)
     peak = float(model_1.line_light(single.values).max())
     tolerated = 2.0 * feature.shape_allowance * peak
+    e_pair = _strength(single, pair, scatter, tolerated)
+    e_single = _strength(rival, best, scatter, tolerated)
+    if feature.reach_nm is not None and abs(pair.value("separation_nm")) > 0.999 * feature.reach_nm:
+        # driven to the end of its reach it is the flank of a foreign line
+        flags.append("foreign-line")
+        e_pair = 0.0
     claims = Claims(
-        log_e_pair=(e_pair := _strength(single, pair, scatter, tolerated)),
-        log_e_single=(e_single := _strength(rival, best, scatter, tolerated)),
+        log_e_pair=e_pair,
+        log_e_single=e_single,
         bound_pair=-np.log(question.false_alarm),
         bound_single=-np.log(question.miss_probability),
         max_log_e_pair=e_pair,
@@ -109,8 +115,6 @@ def weigh_once(counts: Counts, question: Question) -> Look:
         model_2=model_2,
         single=single,
         pair=pair,
-        predictive_pair=[],
-        predictive_single=[],
         flags=flags,
         spread=float(np.sqrt(scatter)),
         residual_limit=2.5 * feature.shape_allowance,

@@ -17,7 +17,8 @@ from analysis.model import FeatureModel, LinearBackground, neutral
 from analysis.profile import FWHM_PER_SIGMA, line_profile
 
 MOST_PLACES = 60
-_ROUGH_STEPS = 8
+FINE = 400
+_ROUGH_STEPS = 6
 
 
 @dataclass(frozen=True, slots=True)
@@ -29,22 +30,39 @@ class Bounds:
     smallest_separation_nm: float
 
 
-def fit_single(model: FeatureModel) -> FitResult:
+def fit_single(model: FeatureModel, *, tolerance: float = 1e-6) -> FitResult:
     """The best single line. ValueError if the model is not of one line with the built-in background."""
-    starts = [start for width in _widths(model) for start in _single_starts(model, width)[:2]]
-    return _polish(model, starts, [(model.lower, model.upper)] * len(starts))
+    found = [start for width in _widths(model) for start in _single_starts(model, width)]
+    starts = _choose(model, found, most=2)
+    return _polish(model, starts, [(model.lower, model.upper)] * len(starts), tolerance)
 
 
-def fit_pair(model: FeatureModel, single: FitResult, *, within: Bounds | None = None) -> FitResult:
+def fit_pair(
+    model: FeatureModel, single: FitResult, *, within: Bounds | None = None, tolerance: float = 1e-6
+) -> FitResult:
     """The best pair; `single` (of the same data) lends its widths. within: bounds of a composite rival."""
     widths = [*_widths(model), (0.9 * single.value("sigma_nm"), _gamma(single))]
-    starts: list[FloatArray] = []
-    limits: list[tuple[FloatArray, FloatArray]] = []
-    for width in widths:
-        for start in _pair_starts(model, width, within, most=3):
-            starts.append(start)
-            limits.append(_limits(model, start, within))
-    return _polish(model, starts, limits)
+    found = [start for width in widths for start in _pair_starts(model, width, within)]
+    starts = _choose(model, found, most=5)
+    return _polish(model, starts, [_limits(model, start, within) for start in starts], tolerance)
+
+
+def _choose(model: FeatureModel, found: list[tuple[float, FloatArray]], *, most: int) -> list[FloatArray]:
+    """The best of the starts (gain, values), no two of them with both lines in the same places."""
+    chosen: list[FloatArray] = []
+    index, near = model.index, 0.3 * model.feature.fwhm_nm
+    for _, start in sorted(found, key=lambda item: -item[0]):
+        place = start[index["centre_nm"]]
+        second = place + model.value(start, "separation_nm")
+        if all(
+            abs(place - other[index["centre_nm"]]) > near
+            or abs(second - other[index["centre_nm"]] - model.value(other, "separation_nm")) > near
+            for other in chosen
+        ):
+            chosen.append(start)
+        if len(chosen) == most:
+            break
+    return chosen
 
 
 def _gamma(made: FitResult) -> float:
@@ -75,21 +93,23 @@ def _limits(model: FeatureModel, start: FloatArray, within: Bounds | None) -> tu
 
 
 def _polish(
-    model: FeatureModel, starts: list[FloatArray], limits: list[tuple[FloatArray, FloatArray]]
+    model: FeatureModel,
+    starts: list[FloatArray],
+    limits: list[tuple[FloatArray, FloatArray]],
+    tolerance: float,
 ) -> FitResult:
     rough = [
         fit(model, start, lower=low, upper=high, tolerance=1e-2, iterations=_ROUGH_STEPS)
         for start, (low, high) in zip(starts, limits, strict=True)
     ]
-    best = sorted(range(len(rough)), key=lambda k: -rough[k].log_likelihood)
+    order = sorted(range(len(rough)), key=lambda k: -rough[k].log_likelihood)
     finals: list[FitResult] = []
-    for k in best[:2]:
+    for k in order[:2]:
         # the runner-up is finished only where it could still win
-        if finals and rough[k].log_likelihood < finals[0].log_likelihood - 3.0:
+        if finals and (rough[k].converged or rough[k].log_likelihood < finals[0].log_likelihood - 1.0):
             break
-        finals.append(
-            fit(model, rough[k].values, lower=limits[k][0], upper=limits[k][1], tolerance=1e-6)
-        )
+        low, high = limits[k]
+        finals.append(fit(model, rough[k].values, lower=low, upper=high, tolerance=tolerance))
     return max(finals, key=lambda made: made.log_likelihood)
 
 
@@ -103,9 +123,7 @@ class _Gram:
     known: NDArray[np.int64]
     base: NDArray[np.int64]
 
-    def solve(
-        self, columns: NDArray[np.int64], tied: float | None = None
-    ) -> tuple[FloatArray, FloatArray]:
+    def solve(self, columns: NDArray[np.int64], tied: float | None = None) -> tuple[FloatArray, FloatArray]:
         """Solutions (S, C) and reductions of chi square (S,) for S choices of C columns.
 
         tied : the second column is added to the first with this factor and dropped.
@@ -134,13 +152,16 @@ def _gram(model: FeatureModel, width: tuple[float, float]) -> _Gram:
     known = np.asarray(feature.known_lines_nm) - feature.wavelength_nm
     centres = np.concatenate([places, (places[:, None] + known).ravel()])
     live = model.live_s(neutral(model))
-    lines = line_profile(
-        x - centres[:, None],
+    # a fine table read linearly is enough for starts
+    fine = np.linspace(0.0, np.abs(centres - 0.5 * (x[0] + x[-1])).max() + 0.5 * span, FINE)
+    table = line_profile(
+        fine,
         sigma_nm=width[0],
         gamma_nm=width[1],
         box_widths_nm=feature.box_widths_nm,
         derivatives=False,
     ).value
+    lines = np.interp(np.abs(x - centres[:, None]), fine, table)
     _, base = model.background.evaluate(x, np.zeros(len(model.background.names)))
     columns = np.vstack([lines, base.T]) * live
     sigma = np.sqrt(np.maximum(model.observed, 1.0)) if model.sigma is None else model.sigma
@@ -155,19 +176,19 @@ def _gram(model: FeatureModel, width: tuple[float, float]) -> _Gram:
     )
 
 
-def _single_starts(model: FeatureModel, width: tuple[float, float]) -> list[FloatArray]:
+def _single_starts(model: FeatureModel, width: tuple[float, float]) -> list[tuple[float, FloatArray]]:
     gram = _gram(model, width)
     main = np.arange(gram.places.size)
     columns = np.column_stack([main, gram.known, np.tile(gram.base, (main.size, 1))])
     solution, gain = gram.solve(columns)
     gain = np.where(solution[:, 0] > 0.0, gain, -np.inf)
     order = np.argsort(-gain, kind="stable")
-    return [_assemble(model, width, gram.places[k], None, solution[k]) for k in order[:4]]
+    return [(float(gain[k]), _assemble(model, width, gram.places[k], None, solution[k])) for k in order[:6]]
 
 
 def _pair_starts(
-    model: FeatureModel, width: tuple[float, float], within: Bounds | None, *, most: int
-) -> list[FloatArray]:
+    model: FeatureModel, width: tuple[float, float], within: Bounds | None
+) -> list[tuple[float, FloatArray]]:
     gram = _gram(model, width)
     number = np.arange(gram.places.size)
     main, second = np.repeat(number, number.size), np.tile(number, number.size)
@@ -188,14 +209,10 @@ def _pair_starts(
             gain = np.where(better, tied_gain, gain)
             spread = np.column_stack([tied[:, 0], factor * tied[:, 0], tied[:, 1:]])
             solution = np.where(better[:, None], spread, solution)
-    chosen: list[int] = []
-    for k in np.argsort(-gain, kind="stable"):
-        if len(chosen) == most or not np.isfinite(gain[k]):
-            break
-        if all(max(abs(main[k] - main[c]), abs(second[k] - second[c])) > 1 for c in chosen):
-            chosen.append(int(k))
+    best = [k for k in np.argsort(-gain, kind="stable")[:60] if np.isfinite(gain[k])]
     return [
-        _assemble(model, width, gram.places[main[k]], gram.places[second[k]], solution[k]) for k in chosen
+        (float(gain[k]), _assemble(model, width, gram.places[main[k]], gram.places[second[k]], solution[k]))
+        for k in best
     ]
 
 

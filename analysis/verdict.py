@@ -11,8 +11,7 @@ import numpy as np
 
 from analysis.answer import Claims, describe
 from analysis.counting import LOAD_LIMIT, Counts
-from analysis.evidence import between, log_predicted, log_shares, predictive_sets
-from analysis.fit import FitResult
+from analysis.evidence import between, log_shares
 from analysis.model import FeatureModel, LinearBackground, vector
 from analysis.question import (
     Budget,
@@ -44,6 +43,9 @@ __all__ = [
     "weigh_once",
 ]
 
+RIVAL_TOLERANCE = 1e-3
+"""A rival's likelihood is needed to this much of a natural logarithm."""
+
 
 def look(evidence: Evidence, question: Question, previous: Look | None) -> Look:
     """One evaluation of the evidence.
@@ -58,7 +60,7 @@ def look(evidence: Evidence, question: Question, previous: Look | None) -> Look:
     model_2 = FeatureModel(evidence.now, question.feature, 2)
     single = fit_single(model_1)
     pair = fit_pair(model_2, single)
-    claims = _claims(evidence, question, previous, single)
+    claims = _claims(evidence, question, previous)
     flags = []
     registered = evidence.now.counts / np.maximum(evidence.now.gate_s, 1e-300)
     if (registered * evidence.now.dead_time_s).max() > LOAD_LIMIT:
@@ -71,13 +73,11 @@ def look(evidence: Evidence, question: Question, previous: Look | None) -> Look:
         model_2=model_2,
         single=single,
         pair=pair,
-        predictive_pair=predictive_sets(pair, model_2, 2 * number),
-        predictive_single=predictive_sets(single, model_1, 2 * number + 1),
         flags=flags,
     )
 
 
-def _claims(evidence: Evidence, question: Question, previous: Look | None, single: FitResult) -> Claims:
+def _claims(evidence: Evidence, question: Question, previous: Look | None) -> Claims:
     bound_pair, bound_single = -np.log(question.false_alarm), -np.log(question.miss_probability)
     if previous is None or evidence.previous is None or evidence.first is None:
         return Claims(0.0, 0.0, bound_pair, bound_single, 0.0, 0.0, 0.0, 0.0)
@@ -88,10 +88,10 @@ def _claims(evidence: Evidence, question: Question, previous: Look | None, singl
     numerator_pair = previous.log_numerator_pair + _predicted(block, question, previous, 2)
     numerator_single = previous.log_numerator_single + _predicted(block, question, previous, 1)
     rival_1 = FeatureModel(tested, question.feature, 1, with_dark=False, with_modes_bounded=True)
-    best_1 = fit_single(rival_1)
+    best_1 = fit_single(rival_1, tolerance=RIVAL_TOLERANCE)
     rival_2 = FeatureModel(tested, question.feature, 2, with_dark=False, with_modes_bounded=True)
     within = Bounds(question.smallest_ratio, 1.0, question.smallest_separation_nm)
-    best_2 = fit_pair(rival_2, best_1, within=within)
+    best_2 = fit_pair(rival_2, best_1, within=within, tolerance=RIVAL_TOLERANCE)
     log_e_pair = numerator_pair - log_shares(rival_1, best_1.values)
     log_e_single = numerator_single - log_shares(rival_2, best_2.values)
     return Claims(
@@ -111,8 +111,7 @@ def _predicted(block: Counts, question: Question, previous: Look, lines: int) ->
     ends = LinearBackground(*previous.window_nm, question.feature.background == "slope")
     model = FeatureModel(block, question.feature, lines, background=ends)
     summary = previous.pair if lines == 2 else previous.single
-    sets = previous.predictive_pair if lines == 2 else previous.predictive_single
-    known = [(place, name) for place, name in enumerate(summary.names) if name in model.index]
-    return log_predicted(
-        model, [vector(model, {name: values[place] for place, name in known}) for values in sets]
-    )
+    known = {
+        name: value for name, value in zip(summary.names, summary.values, strict=True) if name in model.index
+    }
+    return log_shares(model, vector(model, known))

@@ -168,7 +168,9 @@ def _question(spectrum: Spectrum, counts: Counts, asked: Asked) -> Question:
         known_nm = tuple(
             in_medium(w, given.medium, spectrum.medium, at_bench=False) for w in given.known_lines_nm
         )
-    feature = guess_feature(counts, wavelength_nm=line_nm, known_lines_nm=known_nm)
+    feature = guess_feature(counts)
+    if line_nm is not None:  # whoever names the line also names its neighbours: the whole file is the window
+        feature = replace(feature, wavelength_nm=line_nm, known_lines_nm=known_nm, reach_nm=None)
     decide = None if target is None else target.target.goal.decision
     if target is not None:
         model = target.target.model

@@ -35,7 +35,7 @@ class ExportFailed(GratingdError):
 
 
 class Stopper:
-    """Where a stop is asked for, by Ctrl-C, a signal or a timer; it reaches the run in progress and the night."""
+    """Where a stop is asked for, by Ctrl-C, a signal or a timer; it reaches run and night."""
 
     def __init__(self) -> None:
         self.reason: StopReason | None = None
@@ -101,7 +101,8 @@ async def carry_run(
         journal.close()
     await export_run(journal.path, out, clock)
     assert machine.conclusion is not None, "the runner returns after the conclusion only"
-    return machine.conclusion["summary"] | {"file": str(out.absolute())}
+    summary: dict[str, Any] = machine.conclusion["summary"]
+    return summary | {"file": str(out.absolute())}
 
 
 async def export_run(journal_path: Path, out: Path, clock: Clock) -> None:

@@ -7,7 +7,7 @@ import sys
 from collections.abc import Callable, Sequence
 from enum import IntEnum
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, NoReturn
 
 import click
 
@@ -72,7 +72,7 @@ def seed_option(command: Callable[..., Any]) -> Callable[..., Any]:
 @seed_option
 @json_option
 def demo(out: Path | None, seed: int, as_json: bool) -> None:
-    """A whole night in the cellar of the Emberlight Lamp Works: invented bench, simulated light, virtual time.
+    """A whole night in the cellar of the Emberlight Lamp Works: invented bench, simulated, virtual time.
 
     The same seed gives the same night, byte for byte.
     """
@@ -88,7 +88,7 @@ def demo(out: Path | None, seed: int, as_json: bool) -> None:
 @out_option
 @seed_option
 @click.option("--operator", help="Who answers for the night; recorded.")
-@click.option("--real-time", is_flag=True, help="Wait for every gate even if the bench file says virtual time.")
+@click.option("--real-time", is_flag=True, help="Wait for every gate even where the bench says virtual time.")
 @json_option
 def night(
     bench: str, night: str, out: Path, seed: int, operator: str | None, real_time: bool, as_json: bool
@@ -133,7 +133,11 @@ def measure(bench: str, target: str, out: Path, seed: int, operator: str | None,
     "--known-line", type=float, multiple=True, help="A further line known to be there, nm; needs --line."
 )
 @click.option(
-    "--false-alarm", type=click.FloatRange(0, 0.5, min_open=True, max_open=True), default=1e-3, show_default=True
+    "--false-alarm",
+    type=click.FloatRange(0, 0.5, min_open=True, max_open=True),
+    default=1e-3,
+    show_default=True,
+    help="How often a single line may be called a pair.",
 )
 @json_option
 def analyse(
@@ -234,9 +238,7 @@ def _carry_out(order: NightOrder, *, virtual: bool, live: bool, as_json: bool) -
     progress = _progress(live=live, as_json=as_json)
 
     async def work(clock: Clock, stopper: Stopper) -> list[dict[str, Any]]:
-        return await run_night(
-            order, clock, observe=progress.observe, on_run=progress.begin, stopper=stopper
-        )
+        return await run_night(order, clock, observe=progress.observe, on_run=progress.begin, stopper=stopper)
 
     start_utc_ns = order.bench.bench.time.start_utc_ns if virtual else None
     _finish(_with_signals(work, progress, start_utc_ns=start_utc_ns), as_json)
@@ -245,12 +247,11 @@ def _carry_out(order: NightOrder, *, virtual: bool, live: bool, as_json: bool) -
 def _with_signals(
     work: Callable[[Clock, Stopper], Any], progress: Progress, *, start_utc_ns: int | None
 ) -> list[dict[str, Any]]:
-    """Run under real or virtual time; SIGINT and SIGTERM ask for a clean stop. Known errors end in an exit."""
+    """Run under real or virtual time; SIGINT and SIGTERM ask for a clean stop. Known errors exit."""
     import asyncio
     import signal
 
     from daq.carry import Stopper
-    from daq.journal import JournalError
     from daq.records import StopReason
     from drivers.clock import run_real, run_virtual
 
@@ -266,10 +267,9 @@ def _with_signals(
         return result
 
     try:
-        with _mistakes():
-            return run_real(attended) if start_utc_ns is None else run_virtual(attended, start_utc_ns)
-    except JournalError as error:
-        _die(Exit.BROKE_OFF, error)
+        return run_real(attended) if start_utc_ns is None else run_virtual(attended, start_utc_ns)
+    except (SettingsError, DataError) as error:
+        _die(Exit.MISTAKE, error)
     except GratingdError as error:
         _die(Exit.BROKE_OFF, error)
     except KeyboardInterrupt:
@@ -320,7 +320,7 @@ class _mistakes:
             _die(Exit.MISTAKE, error)
 
 
-def _die(code: Exit, error: object) -> Any:
+def _die(code: Exit, error: object) -> NoReturn:
     for line in str(error).splitlines():
         click.echo(f"gratingd: {line}", err=True)
     sys.exit(code)

@@ -19,7 +19,7 @@ from drivers.errors import DeviceError, Halted, HardwareFault, LinkError, OverLi
 from drivers.protocols import Ambient, Detector, Device, GratingDrive, Shutter
 
 HIGHEST_DEAD_TIME_FRACTION = 0.3
-"""Counts times dead time over gate time: above it the correction is no longer trusted and the point is flagged
+"""Counts times dead time over gate time: above it the correction is not trusted and the point is flagged
 (common practice)."""
 
 Ending = tuple[str, dict[str, Any]]

@@ -43,15 +43,15 @@ def make_head(
         "format": FORMAT,
         "run_id": run_id,
         "night": None if night is None else night.night.name,
-        "night_file": None if night is None else _file(night.night.name, night.slug, night.text, night.sha256),
+        "night_file": None if night is None else _file(night.night.name, night),
         "night_start_utc_ns": night_start_utc_ns,
         "created_utc_ns": created_utc_ns,
         "ordinal": ordinal,
         "attempt": attempt,
         "seed": seed,
         "operator": operator,
-        "target": _file(target.target.name, target.slug, target.text, target.sha256),
-        "bench": _file(bench.bench.name, bench.slug, bench.text, bench.sha256) | {"path": place_of(bench.path)},
+        "target": _file(target.target.name, target),
+        "bench": _file(bench.bench.name, bench) | {"path": place_of(bench.path)},
         "spectrum": None if spectrum is None else _spectrum(spectrum),
         "plan": plan,
         "question": question,
@@ -103,8 +103,8 @@ def path_of(place: str) -> Path:
     return shipped_folder() / place.removeprefix(SHIPPED) if place.startswith(SHIPPED) else Path(place)
 
 
-def _file(name: str, slug: str, text: str, sha256: str) -> dict[str, Any]:
-    return {"name": name, "slug": slug, "text": text, "sha256": sha256}
+def _file(name: str, loaded: LoadedBench | LoadedTarget | LoadedNight) -> dict[str, Any]:
+    return {"name": name, "slug": loaded.slug, "text": loaded.text, "sha256": loaded.sha256}
 
 
 def _spectrum(spectrum: Spectrum) -> dict[str, Any]:

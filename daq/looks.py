@@ -9,6 +9,7 @@ from __future__ import annotations
 import asyncio
 import contextlib
 import json
+import os
 import sys
 from dataclasses import replace
 from typing import Any, Protocol
@@ -176,8 +177,12 @@ def _serve() -> None:
             reply: dict[str, Any] = {"look": answer(head, _request_from_json(json.loads(line)))}
         except Exception as error:
             reply = {"error": f"{type(error).__name__}: {error}"}
-        sys.stdout.write(json.dumps(reply, allow_nan=False) + "\n")
-        sys.stdout.flush()
+        try:
+            sys.stdout.write(json.dumps(reply, allow_nan=False) + "\n")
+            sys.stdout.flush()
+        except BrokenPipeError:  # the daemon is gone, nobody waits for the answer
+            os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+            return
 
 
 if __name__ == "__main__":

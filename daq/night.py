@@ -30,7 +30,7 @@ ENDS_THE_NIGHT = frozenset({StopReason.STOPPED_BY_USER, StopReason.NIGHT_DEADLIN
 
 @dataclass(frozen=True, slots=True)
 class NightOrder:
-    """What is to be done: a bench, targets in order, where the files go, and the seed of simulated devices."""
+    """What is to be done: a bench, targets in order, where files go, the seed of simulated devices."""
 
     bench: LoadedBench
     targets: Sequence[LoadedTarget]
@@ -45,7 +45,7 @@ class NightOrder:
 
 
 def open_devices(loaded: LoadedBench, clock: Clock, seed: int) -> Devices:
-    """Everything the bench file names. Raises SettingsError for what it says, DeviceError for what answers."""
+    """Everything the bench file names. Raises SettingsError, or DeviceError if one does not answer."""
     bench, factories = loaded.bench, load_factories(loaded)
 
     def opened(role: str, options: dict[str, Any], world: Any) -> Any:
@@ -69,7 +69,7 @@ async def run_night(
     on_run: Callable[[dict[str, Any]], None] = lambda head: None,
     stopper: Stopper | None = None,
 ) -> list[dict[str, Any]]:
-    """Run it; returns one summary a finished run. Raises SettingsError before anything is written or moved."""
+    """Run it; one summary a finished run. Raises SettingsError before anything is written or moved."""
     start_utc_ns = clock.utc_ns()
     stopper = stopper or Stopper()
     heads = [_head(order, start_utc_ns, i, target) for i, target in enumerate(order.targets, start=1)]
@@ -129,7 +129,5 @@ def _head(order: NightOrder, start_utc_ns: int, ordinal: int, target: LoadedTarg
 
 
 def journal_or_file_exists(out: Path, start_utc_ns: int, ordinal: int, slug: str, attempt: int) -> bool:
-    run_id = run_identity(
-        night_start_utc_ns=start_utc_ns, ordinal=ordinal, target_slug=slug, attempt=attempt
-    )
+    run_id = run_identity(night_start_utc_ns=start_utc_ns, ordinal=ordinal, target_slug=slug, attempt=attempt)
     return journal_path_of(out, run_id).exists() or (out / f"{run_id}.h5").exists()

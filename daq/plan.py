@@ -33,7 +33,7 @@ DARK_DWELLS = 4
 def draw_up(
     loaded: LoadedBench, target: LoadedTarget, spectrum: Spectrum | None
 ) -> tuple[dict[str, Any], dict[str, Any]]:
-    """`(plan, question)` as JSON types. Raises SettingsError when the bench cannot do what the target asks."""
+    """`(plan, question)` as JSON types. Raises SettingsError if the bench cannot do what is asked."""
     bench = loaded.bench
     mount = _mount(loaded, spectrum)
     where = target_wavelength_nm(target, mount.medium)
@@ -116,7 +116,8 @@ def in_medium(wavelength_nm: float, given: str, wanted: str, *, at_bench: bool =
     vacuum_nm = wavelength_nm if given == "vacuum" else vacuum_from_air_nm(wavelength_air_nm=wavelength_nm)
     if wanted == "vacuum":
         return vacuum_nm
-    return air_from_vacuum_nm(wavelength_vacuum_nm=vacuum_nm, air=LABORATORY_AIR if at_bench else STANDARD_AIR)
+    air = LABORATORY_AIR if at_bench else STANDARD_AIR
+    return air_from_vacuum_nm(wavelength_vacuum_nm=vacuum_nm, air=air)
 
 
 def target_wavelength_nm(target: LoadedTarget, medium: str) -> float:

@@ -14,7 +14,7 @@ from enum import StrEnum
 from typing import Any
 
 FORMAT = 1
-"""Version of journal heads, run files and settings files; readers accept this one and (from 2 on) the last."""
+"""Version of journal heads, run files and settings files; readers accept it and (from 2 on) the last."""
 
 Body = Mapping[str, Any]
 

@@ -37,7 +37,7 @@ class Left:
 
 
 def find_journals(folder: Path) -> list[Left]:
-    """Every journal of the folder, by name. Raises DataError for no folder, JournalError for a damaged one."""
+    """Every journal of the folder, by name. Raises DataError without a folder, JournalError if damaged."""
     if not folder.is_dir():
         raise DataError(f"{folder}: is no folder; give the folder that holds the .journal files")
     return [examine(path) for path in sorted(folder.glob("*.journal"))]
@@ -48,7 +48,7 @@ def examine(path: Path) -> Left:
     head = next(records).body
     points = sessions = 0
     last: Record | None = None
-    for last in records:  # noqa: B007
+    for last in records:
         points += last.kind == Kind.POINT
         sessions += last.kind == Kind.SESSION
     seq = 1 if last is None else last.seq
@@ -140,5 +140,3 @@ def bench_of(left: Left) -> LoadedBench:
         folder=path.parent,
         slug=slug_of(bench.name),
     )
-
-

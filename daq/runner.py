@@ -30,7 +30,7 @@ from daq.machine import (
     StartPrepare,
     StartSafe,
 )
-from daq.records import Body, Kind, StopReason
+from daq.records import Body, Kind
 from drivers.clock import Clock
 from drivers.errors import DeviceError, GratingdError
 
@@ -227,5 +227,3 @@ class Runner:
         if self._hands is not None and not self._machine.ended:
             _, report = await asyncio.shield(self._hands.safe())
             log.error("the run broke off; shutter %s, drive %s", report["shutter"], report["drive"])
-
-

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import io
 from collections.abc import Mapping, Sequence
-from typing import Any
+from typing import Any, Literal
 
 from rich.console import Console
 from rich.table import Table
@@ -19,7 +19,8 @@ def runs_table(runs: Sequence[Mapping[str, Any]]) -> str:
     table = Table(box=None, padding=(0, 2, 0, 0), pad_edge=False, header_style="")
     columns = ("target", "verdict", "separation, pm", "ratio", "stopped", "bench time", "points")
     for column in columns:
-        table.add_column(column, justify="right" if column == "points" else "left", no_wrap=column != "target")
+        justify: Literal["left", "right"] = "right" if column == "points" else "left"
+        table.add_column(column, justify=justify, no_wrap=column != "target")
     for run in runs:
         table.add_row(
             run["target"],

@@ -54,7 +54,7 @@ def _pm(value_nm: float | None) -> float | None:
 
 
 def light_to_goal(look: Mapping[str, Any], question: Mapping[str, Any], light_s: float) -> float | None:
-    """How much more open-shutter time the goal needs, in s, if things go on as they did; None: cannot be told.
+    """How much more open-shutter time the goal needs, in s, if things go on so; None: unknown.
 
     An uncertainty falls with the root of the light until it meets its floor (shape and scale); evidence grows
     in proportion to the light.
@@ -68,6 +68,9 @@ def light_to_goal(look: Mapping[str, Any], question: Mapping[str, Any], light_s:
         floor = math.hypot(budget["shape_nm"], budget["scale_nm"])
         if goal_nm <= floor:
             return None
-        return max(0.0, light_s * (budget["statistics_nm"] ** 2 / (goal_nm**2 - floor**2) - 1.0))
-    progress = max(look["log_e_pair"] / look["bound_pair"], look["log_e_single"] / look["bound_single"])
+        share: float = budget["statistics_nm"] ** 2 / (goal_nm**2 - floor**2)
+        return max(0.0, light_s * (share - 1.0))
+    progress: float = max(
+        look["log_e_pair"] / look["bound_pair"], look["log_e_single"] / look["bound_single"]
+    )
     return light_s * (1.0 / progress - 1.0) if progress > 0.05 else None

@@ -116,7 +116,7 @@ class VirtualLoop(base_events.BaseEventLoop):
     def _write_to_self(self) -> None:
         """Wake-ups from other threads: there are none."""
 
-    def run_in_executor(self, executor: Any, func: Any, *args: Any) -> Any:
+    def run_in_executor(self, executor: Any, func: Any, *args: Any) -> Any:  # type: ignore[override]
         raise RuntimeError("virtual time runs no threads")
 
 

@@ -29,7 +29,7 @@ class Draws:
         key = np.frombuffer(digest, dtype="<u8").astype(np.uint64)
         self._bits = np.random.Philox(key=key)
         self._generator = np.random.Generator(self._bits)
-        self._state: Any = self._bits.state
+        self._state: Any = self._bits.state  # a copy of the fresh state, its buffer empty
         self._counter = self._state["state"]["counter"]
         self._next = 0
 
@@ -37,8 +37,6 @@ class Draws:
         """The generator set to the start of event `number` (>= 0). It is shared: use it before the next."""
         self._counter[:] = 0
         self._counter[_EVENT_WORD] = number
-        self._state["buffer_pos"] = 4
-        self._state["has_uint32"] = 0
         self._bits.state = self._state
         return self._generator
 

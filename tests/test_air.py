@@ -89,8 +89,8 @@ def test_an_independent_library_over_a_grid() -> None:
 
 
 def test_another_formula_in_dry_air() -> None:
-    """Birch and Downs' update of Edlen's equation (1993, 1994), as coded in ref_index 1.0; both are$
-    either formula's uncertainty at 1e-8 to 5e-8."""
+    """Birch and Downs' update of Edlen's equation (1993, 1994), as coded in ref_index 1.0;
+    either formula is good to some 1e-8 to 5e-8 (memory)."""
     for wavelength_nm in (360.0, 440.0, 546.1, 633.0):
         theirs = 1e8 * (ref_index.edlen(wavelength_nm, 20.0, 101_325.0, 0.0) - 1.0)
         assert refractivity_1e8(wavelength_nm, 20.0, 101_325.0) == pytest.approx(theirs, abs=1.0)
@@ -157,10 +157,12 @@ def test_group_index_of_standard_air() -> None:
 @pytest.mark.parametrize(
     ("kwargs", "name"),
     [
-        ({"temperature_c": -41.0}, "temperature_c"),
+        ({"temperature_c": -40.1}, "temperature_c"),
+        ({"temperature_c": 100.1, "humidity_percent": 0.0}, "temperature_c"),
         ({"temperature_c": math.nan}, "temperature_c"),
         ({"pressure_pa": 101.325}, "pressure_pa"),  # kPa given for Pa
-        ({"pressure_pa": 150_000.0}, "pressure_pa"),
+        ({"pressure_pa": 9_999.0}, "pressure_pa"),
+        ({"pressure_pa": 140_001.0}, "pressure_pa"),
         ({"humidity_percent": -1.0}, "humidity_percent"),
         ({"humidity_percent": 101.0}, "humidity_percent"),
         ({"co2_ppm": 2001.0}, "co2_ppm"),
@@ -181,6 +183,27 @@ def test_wavelengths_that_air_does_not_pass(wavelength_nm: float) -> None:
         air_from_vacuum_nm(wavelength_vacuum_nm=np.array([500.0, wavelength_nm]))
 
 
-def test_standard_air_is_the_trades() -> None:
-    """15 deg C, 101 325 Pa, dry: common practice for tabulated air wavelengths."""
+def test_the_borders_are_allowed() -> None:
+    Air(-40.0, 10_000.0, 0.0, 0.0)
+    Air(100.0, 140_000.0, 100.0, 2_000.0)
+    assert vacuum_from_air_nm(wavelength_air_nm=180.0) == pytest.approx(180.06, abs=0.01)
+
+
+def test_vapour_on_the_brink_of_boiling() -> None:
+    """Water boils at 60 deg C under 19.946 kPa (saturation table, (memory)): saturated air needs more."""
+    Air(60.0, 20_050.0, 100.0)
+    with pytest.raises(ValueError, match=r"humidity_percent = 100\.0 at 60 C"):
+        Air(60.0, 19_900.0, 100.0)
+
+
+def test_co2_is_450_ppm_unless_given() -> None:
+    assert Air(20.0, 101_325.0, 0.0).co2_ppm == 450.0
+    conditions = {"temperature_c": 20.0, "pressure_pa": 101_325.0, "humidity_percent": 0.0}
+    by_default = refractive_index(wavelength_vacuum_nm=633.0, **conditions)
+    assert by_default == refractive_index(wavelength_vacuum_nm=633.0, co2_ppm=450.0, **conditions)
+
+
+def test_standard_air_and_laboratory_air() -> None:
+    """Tabulated air wavelengths refer to 15 deg C, 101 325 Pa, dry (common practice)."""
+    assert Air(20.0, 101_325.0, 50.0, 450.0) == LABORATORY_AIR
     assert Air(15.0, 101_325.0, 0.0, 450.0) == STANDARD_AIR

@@ -108,7 +108,7 @@ def test_making_safe_goes_on_when_half_of_it_fails(tmp_path: Path, call: str) ->
     outcome = run(
         tmp_path,
         bench=bench_file(tmp_path, faults=fault(device, call, nth, "crash", 10_000)),
-        wishes=[(20.0, lambda runner: runner.wish("stop", reason="stopped-by-user", source="test"))],
+        wishes=[(40.0, lambda runner: runner.wish("stop", reason="stopped-by-user", source="test"))],
     )
     check_whole(outcome)
     safe = outcome.of_kind(Kind.SAFE)[-1]

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import itertools
+
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
@@ -238,8 +240,8 @@ def test_looks_are_geometric_in_the_light() -> None:
             horizons.append(play.looks_asked[0].horizon)
         play.go_on()
     assert len(horizons) > 15
-    for early, late in zip(horizons[5:], horizons[6:], strict=False):
-        assert 1.19 * early < late < 1.2 * early + 11, "not later than the first sweep's end after 1.2"
+    for early, late in itertools.pairwise(horizons[5:]):
+        assert 1.19 * early < late < 1.2 * early + 16, "not later than the first sweep's end after 1.2"
 
 
 def test_a_look_asked_before_a_crash_is_asked_again() -> None:

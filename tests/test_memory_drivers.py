@@ -195,6 +195,18 @@ def test_a_halted_homing_leaves_the_drive_without_a_home() -> None:
     play(story)
 
 
+def test_a_drive_that_loses_its_way_home_must_home_again() -> None:
+    async def story(rig: Rig) -> None:
+        await rig.drive.home(deadline_s=10.0)
+        await rig.drive.move_to(1000, deadline_s=10.0)
+        with pytest.raises(LinkError, match="within 1 s"):
+            await rig.drive.home(deadline_s=1.0)
+        with pytest.raises(LimitError, match="not homed"):
+            await rig.drive.move_to(1, deadline_s=10.0)
+
+    play(story)
+
+
 def test_a_passed_deadline_is_a_link_error_and_the_motor_goes_on() -> None:
     async def story(rig: Rig) -> None:
         await rig.drive.home(deadline_s=10.0)

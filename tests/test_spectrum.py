@@ -171,6 +171,14 @@ def test_sigma_must_be_positive(sigma: str) -> None:
     text = "wavelength_air_nm,counts,sigma\n" + "".join(f"{313 + k},5,1\n" for k in range(9))
     message = refusal(with_line(6, f"317,5,{sigma}", text))
     assert f"line 6: sigma = {float(sigma)!r}; allowed: positive" in message
+    small = parse_spectrum(with_line(6, "317,5,1e-9", text).encode(), "x")
+    assert small.sigma is not None
+    assert small.sigma.min() == 1e-9
+
+
+def test_the_borders_of_the_wavelengths_are_allowed() -> None:
+    borders = parse_spectrum(with_line(2, "10,1", with_line(11, "100000,1")).encode(), "x")
+    assert borders.wavelength_nm[[0, -1]].tolist() == [10.0, 100_000.0]
 
 
 def test_negative_counts_without_sigma() -> None:

@@ -455,6 +455,22 @@ def test_draws_depend_on_seed_device_epoch_and_event_alone() -> None:
     assert float(stream.event(5).random()) == first
 
 
+def test_events_share_no_numbers_however_many_they_draw() -> None:
+    stream = Draws(1, "detector")
+    one = set(stream.event(7).integers(0, 1 << 62, 4096).tolist())
+    two = set(stream.event(8).integers(0, 1 << 62, 4096).tolist())
+    assert len(one) == len(two) == 4096
+    assert not one & two
+
+
+def test_half_used_words_of_one_event_do_not_leak_into_the_next() -> None:
+    stream = Draws(1, "detector")
+    stream.event(3).integers(0, 1 << 20, dtype="uint32")
+    after_odd = int(stream.event(4).integers(0, 1 << 20, dtype="uint32"))
+    stream.event(3).random(3)
+    assert int(stream.event(4).integers(0, 1 << 20, dtype="uint32")) == after_odd
+
+
 def test_events_of_a_stream_are_unrelated() -> None:
     stream = Draws(5, "detector")
     values = np.array([stream.next_event().random() for _ in range(20000)])
