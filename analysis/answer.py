@@ -51,6 +51,8 @@ def misfit_sigmas(model: FeatureModel, made: FitResult) -> float:
     statistic has: at m expected counts a position adds 2 + 1/m, not 2, to the variance. A shape error of the
     allowance, fraction of the line's counts there, counts as noise here.
     """
+    if model.sigma is None and made.mean.sum() < 5.0:
+        return 0.0
     sigma2 = made.mean if model.sigma is None else model.sigma**2
     light = model.line_light(made.values)
     peak = float(light.max(initial=0.0))
@@ -209,7 +211,7 @@ class _PairNumbers:
 def _pair_numbers(model: FeatureModel, pair: FitResult, question: Question, spread: float) -> _PairNumbers:
     ratio, separation = pair.value("ratio"), pair.value("separation_nm")
     centre, centre_u = pair.value("centre_nm"), spread * pair.deviation("centre_nm")
-    if not ratio > 1e-6:
+    if not (ratio > 1e-6 and pair.value("area") > 0.0):
         return _PairNumbers(None, None, None, None, None, centre, centre_u, None)
     budget = separation_budget(
         model, pair, scale_relative_uncertainty=question.scale_relative_uncertainty, spread=spread

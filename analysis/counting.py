@@ -52,3 +52,35 @@ class Counts:
     def groups(self) -> int:
         """Number of dither groups."""
         return int(self.group.max()) + 1 if self.group.size else 0
+
+
+def registered_rate_per_s(true_rate_per_s: FloatArray, *, dead_time_s: float) -> FloatArray:
+    """What a non-paralysable counter registers: r/(1 + r tau), 1/s (textbook)."""
+    return true_rate_per_s / (1.0 + true_rate_per_s * dead_time_s)
+
+
+def true_rate_per_s(registered_per_s: FloatArray, *, dead_time_s: float) -> FloatArray:
+    """The inverse; ValueError where the counter would have been dead all the time."""
+    if np.any(registered_per_s * dead_time_s >= 1.0):
+        raise ValueError("registered rate times dead time must stay below 1")
+    return registered_per_s / (1.0 - registered_per_s * dead_time_s)
+
+
+def live_time_s(counts: FloatArray, gate_s: FloatArray, *, dead_time_s: float) -> FloatArray:
+    """T - n tau, never less than a thousandth of the gate (such data are refused elsewhere: LOAD_LIMIT)."""
+    made: FloatArray = np.maximum(gate_s - counts * dead_time_s, 1e-3 * gate_s)
+    return made
+
+
+def deviance(data: FloatArray, mean: FloatArray, sigma: FloatArray | None) -> float:
+    """Twice the log-likelihood ratio of the saturated model to this one; chi square where sigma is given.
+
+    data, mean, sigma : (N,). Poisson with mean = rate times live time covers the dead time: log L does not
+    depend on the rate.
+    """
+    if sigma is not None:
+        return float(np.sum(((data - mean) / sigma) ** 2))
+    counted = data > 0.0
+    logs = np.zeros(data.size)
+    logs[counted] = data[counted] * np.log(data[counted] / mean[counted])
+    return float(2.0 * np.sum(mean - data + logs))

@@ -14,7 +14,7 @@ from typing import Protocol
 import numpy as np
 from numpy.typing import NDArray
 
-from analysis.counting import FloatArray
+from analysis.counting import FloatArray, deviance
 from analysis.question import FitSummary
 
 
@@ -114,7 +114,7 @@ def fit(
     data, sigma = model.data, model.sigma
     pull = np.where(np.isfinite(model.prior_sd), 1.0 / model.prior_sd**2, 0.0)
     mean, jacobian = model.evaluate(values)
-    cost = _deviance(data, mean, sigma) + float(pull @ (values - model.prior_mean) ** 2)
+    cost = deviance(data, mean, sigma) + float(pull @ (values - model.prior_mean) ** 2)
     damping, converged, step_no = 1e-3, False, 0
     while step_no < iterations and not converged:
         step_no += 1
@@ -134,7 +134,7 @@ def fit(
             moved = trial - values
             gain = float(gradient @ moved - 0.5 * moved @ information @ moved)
             trial_mean, trial_jacobian = model.evaluate(trial)
-            trial_cost = _deviance(data, trial_mean, sigma)
+            trial_cost = deviance(data, trial_mean, sigma)
             trial_cost += float(pull @ (trial - model.prior_mean) ** 2)
             if trial_cost <= cost:
                 converged = abs(gain) < tolerance and damping <= 1.0
@@ -171,7 +171,7 @@ def _result(
     covariance = np.zeros(information.shape)
     known = ~held & (np.diag(information) > 0.0)
     covariance[np.ix_(known, known)] = inverse(information[np.ix_(known, known)])
-    deviance = _deviance(data, mean, sigma)
+    fit_deviance = deviance(data, mean, sigma)
     penalty = float(pull @ (values - model.prior_mean) ** 2)
     bound = (values <= low) | (values >= high)
     free = int(np.sum(~held & ~bound & (pull == 0.0)))
@@ -179,24 +179,15 @@ def _result(
         names=model.names,
         values=values,
         covariance=covariance,
-        deviance=deviance,
+        deviance=fit_deviance,
         penalty=penalty,
-        log_likelihood=-0.5 * (deviance + penalty),
+        log_likelihood=-0.5 * (fit_deviance + penalty),
         pearson_chi2=float(weight @ (data - mean) ** 2),
         dof=max(data.size - free, 1),
         converged=converged,
         iterations=iterations,
         mean=mean,
     )
-
-
-def _deviance(data: FloatArray, mean: FloatArray, sigma: FloatArray | None) -> float:
-    if sigma is not None:
-        return float(np.sum(((data - mean) / sigma) ** 2))
-    counted = data > 0.0
-    logs = np.zeros(data.size)
-    logs[counted] = data[counted] * np.log(data[counted] / mean[counted])
-    return float(2.0 * np.sum(mean - data + logs))
 
 
 def _solve(information: FloatArray, gradient: FloatArray, damping: float) -> FloatArray:

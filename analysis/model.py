@@ -16,7 +16,7 @@ from typing import Protocol
 
 import numpy as np
 
-from analysis.counting import Counts, FloatArray
+from analysis.counting import Counts, FloatArray, IntArray, live_time_s
 from analysis.profile import FWHM_PER_SIGMA, line_profile, mode_width, shape_modes
 from analysis.question import Feature
 
@@ -58,7 +58,8 @@ class LinearBackground:
     def evaluate(self, wavelength_nm: FloatArray, values: FloatArray) -> tuple[FloatArray, FloatArray]:
         if not self.sloping:
             return np.full(wavelength_nm.size, values[0]), np.ones((wavelength_nm.size, 1))
-        share = (wavelength_nm - self.left_nm) / (self.right_nm - self.left_nm)
+        span = self.right_nm - self.left_nm
+        share = (wavelength_nm - self.left_nm) / (span if span > 0.0 else 1.0)
         basis = np.stack([1.0 - share, share], axis=1)
         return basis @ values, basis
 
@@ -110,7 +111,7 @@ class FeatureModel:
     x: FloatArray = field(init=False, repr=False)
     observed: FloatArray = field(init=False, repr=False)
     gate: FloatArray = field(init=False, repr=False)
-    group: FloatArray = field(init=False, repr=False)
+    group: IntArray = field(init=False, repr=False)
     sigma: FloatArray | None = field(init=False, repr=False)
     index: dict[str, int] = field(init=False, repr=False)
 
@@ -190,7 +191,7 @@ class FeatureModel:
         if self.sigma is not None:
             return self.gate
         tau = self.value(values, "dead_time_s", self.counts.dead_time_s)
-        return np.maximum(self.gate - self.observed * tau, 1e-3 * self.gate)
+        return live_time_s(self.observed, self.gate, dead_time_s=tau)
 
     def evaluate(self, values: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Mean (N,) and Jacobian (N, P); with dark one more row."""

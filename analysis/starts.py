@@ -33,7 +33,8 @@ class Bounds:
 def fit_single(model: FeatureModel, *, tolerance: float = 1e-6) -> FitResult:
     """The best single line. ValueError if the model is not of one line with the built-in background."""
     found = [start for width in _widths(model) for start in _single_starts(model, width)]
-    starts = _choose(model, found, most=2)
+    # nothing stands out: begin with no line at all
+    starts = _choose(model, found, most=2) or [np.clip(neutral(model), model.lower, model.upper)]
     return _polish(model, starts, [(model.lower, model.upper)] * len(starts), tolerance)
 
 
@@ -43,8 +44,21 @@ def fit_pair(
     """The best pair; `single` (of the same data) lends its widths. within: bounds of a composite rival."""
     widths = [*_widths(model), (0.9 * single.value("sigma_nm"), _gamma(single))]
     found = [start for width in widths for start in _pair_starts(model, width, within)]
-    starts = _choose(model, found, most=5)
+    starts = _choose(model, found, most=5) or [_beside(model, single, within)]
     return _polish(model, starts, [_limits(model, start, within) for start in starts], tolerance)
+
+
+def _beside(model: FeatureModel, single: FitResult, within: Bounds | None) -> FloatArray:
+    """The single line and a faint second one beside it: where the grid finds no pair at all."""
+    made = neutral(model)
+    for place, name in enumerate(single.names):
+        made[model.index[name]] = single.values[place]
+    smallest = 0.0 if within is None else within.smallest_separation_nm
+    made[model.index["ratio"]] = 0.1 if within is None else within.lowest_ratio
+    made[model.index["separation_nm"]] = max(model.feature.fwhm_nm, smallest)
+    if "sigma2_nm" in model.index:
+        made[model.index["sigma2_nm"]] = single.value("sigma_nm")
+    return made
 
 
 def _choose(model: FeatureModel, found: list[tuple[float, FloatArray]], *, most: int) -> list[FloatArray]:

@@ -51,10 +51,13 @@ def look(evidence: Evidence, question: Question, previous: Look | None) -> Look:
     """One evaluation of the evidence.
 
     previous : what the previous look answered; None at the first one, which only prepares: its counts train
-    the first predictions. ValueError if `previous` and `evidence.previous` do not go together.
+    the first predictions. ValueError if `previous` and `evidence.previous` do not go together, or for
+    readings with sigma.
     """
     if (previous is None) != (evidence.previous is None) or (previous is None) != (evidence.first is None):
         raise ValueError("only the first look has no earlier counts and no earlier answer")
+    if evidence.now.sigma is not None:
+        raise ValueError("a look needs counts; readings with a standard deviation are weighed once")
     number = 1 if previous is None else previous.number + 1
     model_1 = FeatureModel(evidence.now, question.feature, 1)
     model_2 = FeatureModel(evidence.now, question.feature, 2)

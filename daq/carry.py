@@ -72,8 +72,7 @@ async def carry_run(
 ) -> dict[str, Any]:
     """One session of one run, to its conclusion and its file; returns its summary. Closes the journal.
 
-    Raises RunFailed or JournalError when the run broke off (the journal can be recovered), ExportFailed when
-    only the file could not be made.
+    Raises RunFailed or JournalError when the run broke off (the journal can be recovered).
     """
     looker: Looker = InlineLooker(head) if clock.is_virtual else ProcessLooker(head)
     hands = None if devices is None else Hands(devices, Grip(**head["plan"]["grip"]), clock)
@@ -99,25 +98,48 @@ async def carry_run(
                 await snapshots
         await looker.close()
         journal.close()
-    await export_run(journal.path, out, clock)
     assert machine.conclusion is not None, "the runner returns after the conclusion only"
-    summary: dict[str, Any] = machine.conclusion["summary"]
+    return await with_file(machine.conclusion["summary"], journal.path, clock)
+
+
+async def with_file(summary: dict[str, Any], journal_path: Path, clock: Clock) -> dict[str, Any]:
+    """The summary with the path of its exported file; without one, `file` is null and `problem` says why.
+
+    A file that cannot be made must not cost the rest of the night: the journal holds everything.
+    """
+    out = journal_path.with_suffix(".h5")
+    try:
+        await export_run(journal_path, out, clock)
+    except ExportFailed as error:
+        log.error("%s", error)
+        return summary | {"file": None, "problem": str(error)}
     return summary | {"file": str(out.absolute())}
 
 
 async def export_run(journal_path: Path, out: Path, clock: Clock) -> None:
-    """The file of a journal: a plain call under virtual time, a child process otherwise."""
-    if clock.is_virtual:
-        from daq.export import export
+    """The file of a journal: a plain call under virtual time, a child process otherwise.
 
-        export(journal_path, out)
-        return
-    problem = await _export_in_child(journal_path, out)
+    Raises ExportFailed.
+    """
+    if clock.is_virtual:
+        problem = _export_here(journal_path, out)
+    else:
+        problem = await _export_in_child(journal_path, out)
     if problem is not None:
         raise ExportFailed(
             f"{journal_path}: its file could not be made: {problem}; "
             f"mend that and run: gratingd recover {journal_path.parent}"
         )
+
+
+def _export_here(journal_path: Path, out: Path) -> str | None:
+    from daq.export import export
+
+    try:
+        export(journal_path, out)
+    except GratingdError as error:
+        return str(error)
+    return None
 
 
 async def _export_in_child(journal_path: Path, out: Path) -> str | None:

@@ -292,7 +292,10 @@ def _finish(runs: list[dict[str, Any]], as_json: bool) -> None:
     """Print what came out, and end with the code that says how it went."""
     _print_runs(runs, as_json)
     reasons = {run["stop_reason"] for run in runs}
-    if "internal-error" in reasons:
+    problems = [run["problem"] for run in runs if "problem" in run]
+    for problem in problems:
+        click.echo(f"gratingd: {problem}", err=True)
+    if problems or "internal-error" in reasons:
         sys.exit(Exit.BROKE_OFF)
     if reasons & {"fault", "over-light"}:
         sys.exit(Exit.BENCH_FAULT)

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-from daq.carry import Observer, Stopper, carry_run, export_run
+from daq.carry import Observer, Stopper, carry_run, with_file
 from daq.head import path_of
 from daq.journal import FolderLock, Journal, read_journal
 from daq.machine import Machine
@@ -87,8 +87,7 @@ async def recover(
                 continue
             on_run(left.head)
             if left.concluded is not None:
-                await export_run(left.path, left.file, clock)
-                summaries.append(left.concluded["summary"] | {"file": str(left.file.absolute())})
+                summaries.append(await with_file(left.concluded["summary"], left.path, clock))
             else:
                 summaries.append(await _carry_on(left, clock, resume, observe, stopper))
             if stopper.reason is not None:

@@ -39,7 +39,7 @@ def runs_table(runs: Sequence[Mapping[str, Any]]) -> str:
             console.print(f"{run['target']}: {sentence}", soft_wrap=False)
     media = sorted({run["medium"] for run in runs})
     console.print(f"Separations in {' and '.join(media)}; ± is one standard uncertainty." if media else "")
-    folders = sorted({run["file"].rpartition("/")[0] for run in runs if run["stop_reason"]})
+    folders = sorted({run["file"].rpartition("/")[0] for run in runs if run["stop_reason"] and run["file"]})
     for folder in folders:
         console.print(f"Files in {folder}", soft_wrap=True)
     return "\n".join(line.rstrip() for line in stream.getvalue().rstrip().splitlines())
