@@ -55,14 +55,20 @@ class Question:
 
 @dataclass(frozen=True, slots=True)
 class Evidence:
-    """Cumulative counts now, at the previous look and at the first look (both None at look 1).
+    """What was counted so far.
 
-    All three stand on the same N positions; a position not yet visited has gate_s 0.
+    now : everything; estimates are made from it.
+    swept : whole sweeps only, in which every position of a comb was counted for the same time (None: `now` is
+    that). Claims are weighed on these: a comb's gain drops out of a block only if the block covers the comb.
+    previous, first : `swept` at the previous look and at the first one (both None at look 1).
+
+    All stand on the same N positions; a position not yet visited has gate_s 0.
     """
 
     now: Counts
     previous: Counts | None = None
     first: Counts | None = None
+    swept: Counts | None = None
 
 
 @dataclass(frozen=True, slots=True)

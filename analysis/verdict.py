@@ -84,8 +84,9 @@ def _claims(evidence: Evidence, question: Question, previous: Look | None) -> Cl
     bound_pair, bound_single = -np.log(question.false_alarm), -np.log(question.miss_probability)
     if previous is None or evidence.previous is None or evidence.first is None:
         return Claims(0.0, 0.0, bound_pair, bound_single, 0.0, 0.0, 0.0, 0.0)
-    block = between(evidence.now, evidence.previous)
-    tested = between(evidence.now, evidence.first)
+    swept = evidence.now if evidence.swept is None else evidence.swept
+    block = between(swept, evidence.previous)
+    tested = between(swept, evidence.first)
     if not block.counts.any():
         return Claims.carried(previous)
     numerator_pair = previous.log_numerator_pair + _predicted(block, question, previous, 2)

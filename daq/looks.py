@@ -11,7 +11,6 @@ import contextlib
 import json
 import os
 import sys
-from dataclasses import replace
 from typing import Any, Protocol
 
 import numpy as np
@@ -72,7 +71,10 @@ def answer(head: Body, request: StartLook) -> dict[str, Any]:
         return None if snapshot is None else counts_of(snapshot, plan, at=now)
 
     evidence = Evidence(
-        now=counts_of(now, plan), previous=earlier(request.previous), first=earlier(request.first)
+        now=counts_of(now, plan),
+        swept=earlier(request.swept),
+        previous=earlier(request.previous),
+        first=earlier(request.first),
     )
     previous = None if request.previous_look is None else from_json(Look, request.previous_look)
     result: dict[str, Any] = to_json(look(evidence, from_json(Question, head["question"]), previous))
@@ -154,6 +156,7 @@ def _request_to_json(request: StartLook) -> dict[str, Any]:
     return {
         "horizon": request.horizon,
         "now": request.now.to_json(),
+        "swept": request.swept.to_json(),
         "previous": plain(request.previous),
         "first": plain(request.first),
         "previous_look": request.previous_look,
@@ -165,9 +168,15 @@ def _request_from_json(plain: Body) -> StartLook:
     def snapshot(key: str) -> Snapshot | None:
         return None if plain[key] is None else Snapshot.from_json(plain[key])
 
-    now = Snapshot.from_json(plain["now"])
-    request = StartLook(plain["horizon"], now, None, None, plain["previous_look"], plain["final"])
-    return replace(request, previous=snapshot("previous"), first=snapshot("first"))
+    return StartLook(
+        horizon=plain["horizon"],
+        now=Snapshot.from_json(plain["now"]),
+        swept=Snapshot.from_json(plain["swept"]),
+        previous=snapshot("previous"),
+        first=snapshot("first"),
+        previous_look=plain["previous_look"],
+        final=plain["final"],
+    )
 
 
 def _serve() -> None:

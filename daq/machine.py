@@ -87,10 +87,15 @@ class StartPoint:
 
 @dataclass(frozen=True, slots=True)
 class StartLook:
-    """Weigh the evidence up to `horizon` points. `final` asks for the conclusion."""
+    """Weigh the evidence up to `horizon` points. `final` asks for the conclusion.
+
+    `now` is everything counted, `swept` whole sweeps only, in which every position had its full dwell; `previous`
+    and `first` are `swept` as it was at the previous look and at the first.
+    """
 
     horizon: int
     now: Snapshot
+    swept: Snapshot
     previous: Snapshot | None
     first: Snapshot | None
     previous_look: dict[str, Any] | None
@@ -137,6 +142,8 @@ class Machine:
         self.stop: StopReason | None = None
         self.ended = False
         self.tally = Tally()
+        self._swept = Tally()
+        self._sweep: Tally | None = Tally()
         self.points = 0
         self.light_ns = 0
         self.sweeps_done = 0
@@ -205,17 +212,24 @@ class Machine:
         self.points += 1
         if body["light"]:
             self.light_ns += body["gate_ns"]
-        if not body["flags"]:
-            self.tally.add(
-                steps=body["steps"],
-                group=body["group"],
-                light=body["light"],
-                counts=body["counts"],
-                gate_ns=body["gate_ns"],
-            )
+        if body["flags"]:
+            self._sweep = None  # a sweep with a gap in it says nothing about the comb as a whole
+        else:
+            self._count(body)
         self._counted_ns += body["gate_ns"]
         if self._counted_ns >= self._visits[self._cursor].dwell_ns:
             self._next_visit()
+
+    def _count(self, body: Body) -> None:
+        for tally in (self.tally, self._sweep):
+            if tally is not None:
+                tally.add(
+                    steps=body["steps"],
+                    group=body["group"],
+                    light=body["light"],
+                    counts=body["counts"],
+                    gate_ns=body["gate_ns"],
+                )
 
     def _halted_record(self, body: Body) -> None:
         self.action = Action.NOTHING
@@ -342,6 +356,10 @@ class Machine:
         self._counted_ns = 0
         if self._pending is not None:
             self._pending.visits_left -= 1
+        if self._sweep_is_over():
+            if self._sweep is not None:
+                self._swept.include(self._sweep)
+            self._sweep = Tally()
 
     def _sweep_is_over(self) -> bool:
         return self._cursor >= len(self._visits)
@@ -351,6 +369,7 @@ class Machine:
         return StartLook(
             horizon=self.points,
             now=self.tally.snapshot(),
+            swept=self._swept.snapshot(),
             previous=self._previous,
             first=self._first,
             previous_look=self.looks[-1] if self.looks else None,
@@ -363,9 +382,9 @@ class Machine:
             return
         self._pending = None
         self.looks.append(pending.answer)
-        self._previous = pending.request.now
+        self._previous = pending.request.swept
         if self._first is None:
-            self._first = pending.request.now
+            self._first = pending.request.swept
         if pending.answer["goal_reached"]:
             self._stop_for(StopReason.GOAL_REACHED)
 

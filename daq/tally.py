@@ -51,6 +51,15 @@ class Tally:
         cell[0] += counts
         cell[1] += gate_ns
 
+    def include(self, other: Tally) -> None:
+        """Add all that another tally holds."""
+        for key, (counts, gate_ns) in other._light.items():
+            cell = self._light.setdefault(key, [0, 0])
+            cell[0] += counts
+            cell[1] += gate_ns
+        self._dark[0] += other._dark[0]
+        self._dark[1] += other._dark[1]
+
     @property
     def can_be_weighed(self) -> bool:
         """Whether enough positions were counted with the shutter open for a fit to mean anything."""

@@ -257,5 +257,6 @@ def replay(the_plan: dict[str, Any], journal: Sequence[tuple[str, dict[str, Any]
 def state_of(machine: Machine) -> dict[str, Any]:
     """Everything a machine knows, comparable."""
     state = dict(vars(machine))
-    state["tally"] = machine.tally.snapshot()
+    for name in ("tally", "_swept", "_sweep"):
+        state[name] = None if state[name] is None else state[name].snapshot()
     return state

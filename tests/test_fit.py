@@ -175,15 +175,15 @@ def test_against_an_independent_minimiser() -> None:
     share = (x - x[0]) / (x[-1] - x[0])
 
     def minus_log(
-        a: float, c: float, s: float, bl: float, br: float, d: float, g1: float, g2: float
+        a: float, c: float, s: float, bl: float, br: float, d: float, gain1: float, gain2: float
     ) -> float:
         bell = a / (s * np.sqrt(2.0 * np.pi)) * np.exp(-0.5 * ((x - c) / s) ** 2)
         light = bell + bl * (1.0 - share) + br * share
-        mean = 2.0 * (np.array([1.0, g1, g2])[group] * light + d)
+        mean = 2.0 * (np.array([1.0, gain1, gain2])[group] * light + d)
         dark = 40.0 * d
         return float(np.sum(mean - n * np.log(mean)) + dark - counts.dark_counts * np.log(dark))
 
-    other = Minuit(minus_log, a=5.0, c=313.155, s=0.008, bl=5.0, br=9.0, d=5.0, g1=1.0, g2=1.0)
+    other = Minuit(minus_log, a=5.0, c=313.155, s=0.008, bl=5.0, br=9.0, d=5.0, gain1=1.0, gain2=1.0)
     other.errordef = Minuit.LIKELIHOOD
     other.tol = 1e-4
     other.migrad()
@@ -191,7 +191,9 @@ def test_against_an_independent_minimiser() -> None:
     assert other.valid
     names = ("area", "centre_nm", "sigma_nm", "background_left_per_s", "background_right_per_s")
     for theirs, ours in zip(
-        ["a", "c", "s", "bl", "br", "d", "g1", "g2"], (*names, "dark_per_s", "gain_1", "gain_2"), strict=True
+        ["a", "c", "s", "bl", "br", "d", "gain1", "gain2"],
+        (*names, "dark_per_s", "gain_1", "gain_2"),
+        strict=True,
     ):
         u = other.errors[theirs]
         assert abs(made.value(ours) - other.values[theirs]) < 0.01 * u, (ours, seed)

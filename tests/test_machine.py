@@ -284,3 +284,25 @@ def test_an_unexpected_fault_elsewhere_halts_the_point() -> None:
     assert seen == [Halt()]
     play.to_the_end()
     assert play.machine.stop is StopReason.INTERNAL_ERROR
+
+
+def test_claims_rest_on_whole_sweeps_only() -> None:
+    """A sweep that is under way, or that lost a position to a flag, is in the estimate but not in the evidence:
+    its share of a comb would otherwise be weighed against the whole comb."""
+    play = Play()
+    visits = len(play.machine._visits)
+    play.finish()
+    for _ in range(visits):
+        play.finish()
+    assert play.looks_asked[0].swept == play.looks_asked[0].now
+    play.finish(10)  # a flagged point in the second sweep
+    while play.machine.sweeps_done < 3:
+        play.go_on()
+    _wish(play, "stop", StopReason.STOPPED_BY_USER)
+    play.finish(2)
+    play.finish()
+    final = play.outstanding
+    seconds = {row[:2]: row[3] // (2 * GATE_NS) for row in final.swept.rows}
+    assert sum(row[3] for row in final.now.rows) > sum(row[3] for row in final.swept.rows)
+    assert {group for _, group in seconds} == {0, 2}, "the comb of the flagged sweep is left out"
+    assert set(seconds.values()) == {1}, "every position of a comb was counted equally often"
