@@ -18,6 +18,8 @@ from analysis.profile import FWHM_PER_SIGMA, line_profile
 
 MOST_PLACES = 60
 FINE = 400
+KNOWN_ZONE_FWHM = 0.3
+"""A second line is not sought closer than this to a known line: there it could only replace it."""
 _ROUGH_STEPS = 6
 
 
@@ -90,6 +92,11 @@ def _widths(model: FeatureModel) -> list[tuple[float, float]]:
     return [(sigma, gamma), (float(np.hypot(sigma, model.feature.fwhm_nm / FWHM_PER_SIGMA)), gamma)]
 
 
+def _known_gaps(model: FeatureModel) -> list[float]:
+    """Distances of the known lines from the main line, nm."""
+    return [known - model.feature.wavelength_nm for known in model.feature.known_lines_nm]
+
+
 def _limits(model: FeatureModel, start: FloatArray, within: Bounds | None) -> tuple[FloatArray, FloatArray]:
     low, high = model.lower.copy(), model.upper.copy()
     ratio, separation = model.index["ratio"], model.index["separation_nm"]
@@ -97,12 +104,17 @@ def _limits(model: FeatureModel, start: FloatArray, within: Bounds | None) -> tu
     centre = start[model.index["centre_nm"]]
     low[separation] = max(low[separation], model.x[0] - centre)
     high[separation] = min(high[separation], model.x[-1] - centre)
+    for gap in _known_gaps(model):
+        if start[separation] > gap:
+            low[separation] = max(low[separation], gap + KNOWN_ZONE_FWHM * model.feature.fwhm_nm)
+        else:
+            high[separation] = min(high[separation], gap - KNOWN_ZONE_FWHM * model.feature.fwhm_nm)
     if within is not None:
         low[ratio], high[ratio] = within.lowest_ratio, within.highest_ratio
         if start[separation] > 0.0:
-            low[separation] = within.smallest_separation_nm
+            low[separation] = max(low[separation], within.smallest_separation_nm)
         else:
-            high[separation] = -within.smallest_separation_nm
+            high[separation] = min(high[separation], -within.smallest_separation_nm)
     return low, high
 
 
@@ -209,6 +221,9 @@ def _pair_starts(
     smallest = 0.0 if within is None else within.smallest_separation_nm
     apart = np.abs(gram.places[main] - gram.places[second])
     keep = (main != second) & (apart >= smallest - 0.5 * (gram.places[1] - gram.places[0]))
+    for gap in _known_gaps(model):
+        away = np.abs(gram.places[second] - gram.places[main] - gap)
+        keep &= away > KNOWN_ZONE_FWHM * model.feature.fwhm_nm
     keep &= apart <= model.upper[model.index["separation_nm"]]
     main, second = main[keep], second[keep]
     columns = np.column_stack([main, second, gram.known[main], np.tile(gram.base, (main.size, 1))])

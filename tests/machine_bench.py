@@ -56,6 +56,7 @@ class Play:
         self.looks_asked: list[StartLook] = []
         self.points_started: list[StartPoint] = []
         self.was_made_safe = False
+        self.at_rest = False
         self.devices = True
         self.good_light = [0, 0]
         self.session(devices=True)
@@ -73,6 +74,8 @@ class Play:
         rows = self.machine.tally.snapshot().rows
         assert [sum(r[2] for r in rows), sum(r[3] for r in rows)] == self.good_light
         assert self.machine.action is (_action_of(self) if not self.machine.ended else Action.NOTHING)
+        if self.machine.paused and self.outstanding is None and not self.machine.ended:
+            assert self.at_rest, "paused, nothing under way, and the shutter may be open"
 
     def _hold(self, effect: Effect) -> None:
         """The invariants on what the machine starts."""
@@ -93,11 +96,11 @@ class Play:
                 assert self.machine.stop is None
                 assert not self.machine.paused
                 assert visit.dwell_ns > 0
-                self.was_made_safe = False
+                self.was_made_safe = self.at_rest = False
                 self.points_started.append(effect)
             case StartPrepare():
                 assert self.machine.stop is None
-                self.was_made_safe = False
+                self.was_made_safe = self.at_rest = False
             case StartLook():
                 assert self.machine.stop is not None
                 assert self.was_made_safe or not self.devices, "no conclusion before a safe stop"
@@ -105,7 +108,7 @@ class Play:
     def session(self, *, devices: bool) -> None:
         self.outstanding = None
         self.looks_asked = []
-        self.was_made_safe = False
+        self.was_made_safe = self.at_rest = False
         self.devices = devices
         self.now_ns = 0
         self.record(Kind.SESSION, number=1, reason="start", utc_ns=0, devices=devices)
@@ -121,11 +124,12 @@ class Play:
                 elif choice % 5 == 4:
                     self._fault("prepare", choice)
                 else:
+                    self.at_rest = True
                     self.record(Kind.PREPARED, identities={}, home_steps=0, ambient=None)
             case StartPoint():
                 self._finish_point(effect, choice)
             case StartSafe():
-                self.was_made_safe = True
+                self.was_made_safe = self.at_rest = True
                 if choice % 7 == 6:
                     self._fault("safe", choice)
                 else:
@@ -138,13 +142,13 @@ class Play:
     def _finish_point(self, start: StartPoint, choice: int) -> None:
         visit = start.visit
         gates_ns = visit.dwell_ns
+        if choice % 9 == 8:
+            return self._fault("point", choice)
         if self.letting_go:
             if choice % 3 == 1:
                 return self.record(Kind.HALTED)
             if choice % 3 == 2 and visit.dwell_ns > GATE_NS:
                 gates_ns = GATE_NS
-        elif choice % 9 == 8:
-            return self._fault("point", choice)
         flags = ["saturated"] if choice % 11 == 10 else []
         counts = counts_at(visit.steps, start.sweep)
         if visit.light and not flags:

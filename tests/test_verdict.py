@@ -17,8 +17,9 @@ from analysis.verdict import look
 
 @pytest.mark.slow
 def test_repeated_looks_raise_no_more_false_alarms_than_stated() -> None:
-    """True singles of any width, background, slope and 1 % of skew, 8 looks each at a level of 0.05. Thirty of
-    them raise 6 alarms or more with a chance of 3e-3 (binomial) if the level holds."""
+    """True singles of any width, background, slope and 1 % of skew, 8 looks each at a level of 0.05.
+
+    Thirty of them raise 6 alarms or more with a chance of 3e-3 (binomial) if the level holds."""
     alarms = []
     for seed in range(100, 130):
         draw = np.random.Generator(np.random.Philox(key=[seed, 1]))
@@ -80,7 +81,7 @@ def _limit(answer: Look, fwhms: float) -> float:
 
 
 def test_exclusion_limits_hold() -> None:
-    """A second line of just the excluded strength would have been seen: 95 % limits cover a true faint line."""
+    """95 % limits cover a true faint line."""
     covered = 0
     for seed in range(300, 325):
         lamp = Lamp(seed, separation_fwhm=1.5, ratio=0.05)
@@ -104,10 +105,11 @@ def test_a_pair_is_not_called_single() -> None:
 
 def test_a_line_broader_than_expected_is_not_called_single() -> None:
     """Two lines closer than the question asks about look like one broad line: undecided, and said so."""
-    last = night(Lamp(41, separation_fwhm=0.7, ratio=0.9), question(), looks=(2, 4, 6, 8, 12))[-1]
-    assert last.verdict != "single"
-    if last.verdict == "undecided":
-        assert "broader-than-expected" in last.flags
+    answers = night(Lamp(41, separation_fwhm=0.7, ratio=0.9), question(), looks=(2, 4, 6, 8, 12, 16, 24))
+    assert "single" not in [answer.verdict for answer in answers]
+    ruled_out = [answer for answer in answers if answer.log_e_single >= answer.bound_single]
+    assert ruled_out
+    assert "broader-than-expected" in ruled_out[0].flags
 
 
 def test_three_lines_are_neither_one_nor_two() -> None:
@@ -143,7 +145,7 @@ def test_shape_error_does_not_average_away() -> None:
         assert answer.budget is not None
         shares.append(answer.budget)
     assert shares[1].statistics_nm < 0.2 * shares[0].statistics_nm
-    assert shares[1].shape_nm > 0.5 * shares[0].shape_nm
+    assert shares[1].shape_nm == pytest.approx(shares[0].shape_nm, rel=0.4)
     assert shares[1].shape_nm > shares[1].statistics_nm
 
 
