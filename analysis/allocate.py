@@ -44,12 +44,12 @@ class Window:
     dark_ns: int
 
     def __post_init__(self) -> None:
-        if self.highest_steps <= self.lowest_steps:
-            raise ValueError("a window needs highest_steps above lowest_steps")
         if not 1 <= self.groups <= self.step_steps:
             raise ValueError("groups must be between 1 and step_steps")
-        if self.dwell_ns <= 0 or self.dark_ns < 0 or self.step_steps < 1:
-            raise ValueError("dwell_ns and step_steps must be positive, dark_ns not negative")
+        if self.highest_steps - self.lowest_steps < self.step_steps:
+            raise ValueError("a window needs highest_steps at least step_steps above lowest_steps")
+        if self.dwell_ns <= 0 or self.dark_ns < 0:
+            raise ValueError("dwell_ns must be positive, dark_ns not negative")
 
     def to_json(self) -> dict[str, Any]:
         return asdict(self)

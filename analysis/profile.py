@@ -232,8 +232,8 @@ def _table(grid: FloatArray, gamma: float, order: int) -> FloatArray:
         piece = h / 2.0 * (f[:-1] + f[1:]) + h**2 / 10.0 * (d1[:-1] - d1[1:])
         piece += h**3 / 120.0 * (d2[:-1] + d2[1:])
         levels.insert(0, np.concatenate([np.zeros(1, dtype=np.complex128), np.cumsum(piece)]))
-    made = np.stack(levels[:4], axis=-1)
-    return np.concatenate([made.real, made.imag], axis=-1)
+    made = np.array(levels[:4]).T
+    return np.concatenate([made.real, made.imag], axis=1)
 
 
 _ROOT2 = np.sqrt(2.0)

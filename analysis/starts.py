@@ -18,6 +18,7 @@ from analysis.profile import FWHM_PER_SIGMA, line_profile
 
 MOST_PLACES = 60
 FINE = 400
+PAIR_STARTS = 4
 KNOWN_ZONE_FWHM = 0.3
 """A second line is not sought closer than this to a known line: there it could only replace it."""
 _ROUGH_STEPS = 6
@@ -46,7 +47,7 @@ def fit_pair(
     """The best pair; `single` (of the same data) lends its widths. within: bounds of a composite rival."""
     widths = [*_widths(model), (0.9 * single.value("sigma_nm"), _gamma(single))]
     found = [start for width in widths for start in _pair_starts(model, width, within)]
-    starts = _choose(model, found, most=5) or [_beside(model, single, within)]
+    starts = _choose(model, found, most=PAIR_STARTS) or [_beside(model, single, within)]
     return _polish(model, starts, [_limits(model, start, within) for start in starts], tolerance)
 
 
@@ -209,7 +210,7 @@ def _single_starts(model: FeatureModel, width: tuple[float, float]) -> list[tupl
     solution, gain = gram.solve(columns)
     gain = np.where(solution[:, 0] > 0.0, gain, -np.inf)
     order = np.argsort(-gain, kind="stable")
-    return [(float(gain[k]), _assemble(model, width, gram.places[k], None, solution[k])) for k in order[:6]]
+    return [(float(gain[k]), _assemble(model, width, gram.places[k], None, solution[k])) for k in order[:2]]
 
 
 def _pair_starts(
@@ -238,7 +239,12 @@ def _pair_starts(
             gain = np.where(better, tied_gain, gain)
             spread = np.column_stack([tied[:, 0], factor * tied[:, 0], tied[:, 1:]])
             solution = np.where(better[:, None], spread, solution)
-    best = [k for k in np.argsort(-gain, kind="stable")[:60] if np.isfinite(gain[k])]
+    best: list[int] = []
+    for k in np.argsort(-gain, kind="stable")[:200].tolist():
+        if len(best) == PAIR_STARTS or not np.isfinite(gain[k]):
+            break
+        if all(max(abs(main[k] - main[c]), abs(second[k] - second[c])) > 1 for c in best):
+            best.append(k)
     return [
         (float(gain[k]), _assemble(model, width, gram.places[main[k]], gram.places[second[k]], solution[k]))
         for k in best

@@ -18,6 +18,12 @@ _BLOCK = 4096  # rows written, and rows an HDF5 chunk
 _TEXT = h5py.string_dtype("utf-8")
 
 _UNITS = (
+    ("_per_s_per_nm", "1/(s nm)"),
+    ("steps_per_s2", "steps/s^2"),
+    ("steps_per_s", "steps/s"),
+    ("steps_per_radian", "steps/radian"),
+    ("_per_k", "1/K"),
+    ("_per_cm", "1/cm"),
     ("_per_radian", "1/radian"),
     ("_per_mm", "1/mm"),
     ("_per_s", "1/s"),
@@ -30,6 +36,10 @@ _UNITS = (
     ("_mm", "mm"),
     ("_um", "um"),
     ("_ns", "ns"),
+    ("_hz", "Hz"),
+    ("_ghz", "GHz"),
+    ("_mev", "meV"),
+    ("_k", "K"),
     ("_pa", "Pa"),
     ("_c", "degC"),
     ("_s", "s"),

@@ -15,6 +15,7 @@ in journal order, so a run is resumed by folding the same `step` over its journa
 Invariants (tests/test_machine.py holds them over random sequences):
 - at most one action is outstanding, and every effect that starts one follows a moment with none;
 - after a stop no point starts; a safe stop always precedes the conclusion when devices are open;
+- a paused bench is at rest: shutter closed, nothing moving, whatever ended the dwell;
 - the run ends exactly once, with a reason from StopReason, and nothing is accepted afterwards;
 - points are never lost or counted twice: the tally is the sum of the good points so far;
 - decisions depend on the order of records only, never on when a look's answer arrived.
@@ -300,7 +301,7 @@ class Machine:
         if self.stop is not None:
             yield self._wind_up()
         elif self.paused:
-            if self._prepared and not self._resting:
+            if not self._resting:
                 yield self._begin(Action.SAFE, StartSafe())
         elif not self._prepared:
             yield self._begin(Action.PREPARE, StartPrepare())
@@ -308,18 +309,20 @@ class Machine:
             yield from self._measure()
 
     def _interrupt(self) -> Iterable[Effect]:
-        if self.stop is not None:
+        if self.action is Action.LOOK and not self._final_asked and (self.paused or self.stop is not None):
+            self.action = Action.NOTHING  # nobody waits any more; the answer is taken when it comes
+        elif self.stop is not None:
             if self.action in (Action.PREPARE, Action.POINT):
                 self.action = Action.HALT
                 yield Halt()
-            elif self.action is Action.LOOK and not self._final_asked:
-                self.action = Action.NOTHING
         elif self.paused and self.action is Action.POINT and not self._dwell_ending:
             self._dwell_ending = True
             yield EndDwell()
 
     def _begin(self, action: Action, effect: Effect) -> Effect:
         self.action = action
+        if action in (Action.PREPARE, Action.POINT):
+            self._resting = False  # until it is prepared or made safe: a fault leaves the shutter as it was
         return effect
 
     def _wind_up(self) -> Effect:
@@ -339,7 +342,6 @@ class Machine:
                 self.action = Action.LOOK  # the answer is late: wait, decisions do not depend on speed
                 return
         visit = self._visits[self._cursor].shortened(self._counted_ns, self._light_left_ns())
-        self._resting = False
         yield self._begin(Action.POINT, StartPoint(self.sweeps_done, self._cursor, visit))
 
     def _plan_sweep(self) -> None:

@@ -375,7 +375,7 @@ def test_kill_9_in_an_export_leaves_the_old_file(tmp_path: Path, moment: str) ->
     ("name", "unit"),
     [("dwell_s", "s"), ("at_ns", "ns"), ("dark_per_s", "1/s"), ("wavelength_air_nm", "nm"),
      ("steps", "steps"), ("temperature_c", "degC"), ("number", None), ("groove_density_per_mm", "1/mm"),
-     ("steps_per_radian", "1/radian")],
+     ("steps_per_radian", "steps/radian")],
 )  # fmt: skip
 def test_units_come_from_names(name: str, unit: str | None) -> None:
     assert unit_of(name) == unit
