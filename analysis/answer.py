@@ -10,7 +10,7 @@ from analysis.exclusion import exclusion_curve
 from analysis.fit import FitResult, inverse
 from analysis.model import FeatureModel
 from analysis.profile import ObservedWidth, observed_width
-from analysis.question import Budget, Exclusion, Look, Question
+from analysis.question import Budget, Look, Question
 
 POOR_FIT_SIGMAS = 4.753
 """One-sided normal quantile of 1e-6."""
@@ -274,6 +274,3 @@ def explain(
     if look.budget is not None and look.budget.shape_nm > look.budget.statistics_nm:
         said.append("the line shape, not the light, limits the separation: more light does not help")
     return replace(look, evidence=tuple(said))
-
-
-__all__ = ["Claims", "Exclusion", "describe", "explain", "misfit_sigmas", "separation_budget"]

@@ -62,8 +62,9 @@ def guess_feature(counts: Counts, *, shape_allowance: float = RECORDED_ALLOWANCE
 
 
 def weigh_once(counts: Counts, question: Question) -> Look:
-    """One line or two in a recorded spectrum. Without sigma the readings count as Poisson or nearly so.
+    """One line or two in a recorded spectrum.
 
+    Without sigma the variance is the counts, or the scatter of the faint readings where that is more.
     With `feature.reach_nm` the spectrum is cut at the valleys towards foreign peaks beyond that reach. Where
     single is claimed, every pair of the question's smallest ratio and separation fails as (a) and (b) above
     demand of a claim. Either way the data stay within 2.5 allowances of the fit, or it is undecided.
@@ -87,7 +88,11 @@ def weigh_once(counts: Counts, question: Question) -> Look:
     tolerated = 2.0 * feature.shape_allowance * peak
     e_pair = _strength(single, pair, scatter, tolerated)
     e_single = _strength(rival, best, scatter, tolerated)
-    if feature.reach_nm is not None and abs(pair.value("separation_nm")) > 0.999 * feature.reach_nm:
+    second = pair.value("centre_nm") + pair.value("separation_nm")
+    room = min(second - model_2.x[0], model_2.x[-1] - second) - 0.5 * feature.fwhm_nm
+    if feature.reach_nm is not None and (
+        room < 1e-3 * feature.fwhm_nm or abs(pair.value("separation_nm")) > 0.999 * feature.reach_nm
+    ):
         # driven to the end of its reach it is the flank of a foreign line
         flags.append("foreign-line")
         e_pair = 0.0
@@ -105,7 +110,7 @@ def weigh_once(counts: Counts, question: Question) -> Look:
     reasons: list[str] = []
     if scatter > 1.0:
         reasons.append(f"readings scatter {np.sqrt(scatter):.2g} times as much as stated: u widened")
-    if claims.max_log_e_pair < claims.bound_pair and e_pair == 0.0:
+    if e_pair == 0.0 and claims.max_log_e_single < claims.bound_single:
         reasons.append("a line shape off by twice the allowance would look the same as a second line")
     return describe(
         number=1,
@@ -137,11 +142,19 @@ def _soften(counts: Counts, feature: Feature) -> Counts:
     y = counts.counts
     if counts.sigma is None:
         smooth = np.convolve(np.pad(y, 1, mode="edge"), [0.25, 0.5, 0.25], mode="valid")
-        sigma = np.sqrt(np.maximum(smooth, 1.0))
+        sigma = np.sqrt(np.maximum(smooth, max(_quiet_sd(y, smooth) ** 2, 1.0)))
     else:
         sigma = counts.sigma
     allowed = 0.5 * feature.shape_allowance * np.sqrt(np.maximum(y, 0.0) * max(float(y.max()), 0.0))
     return replace(counts, sigma=np.hypot(sigma, allowed))
+
+
+def _quiet_sd(y: FloatArray, smooth: FloatArray) -> float:
+    """Scatter of the fainter half of the readings against their neighbours' mean (robust: median): the noise
+    that stays where a bias was subtracted and the counts no longer tell it."""
+    stray = y[1:-1] - 0.5 * (y[:-2] + y[2:])
+    quiet = smooth[1:-1] <= np.median(smooth)
+    return float(1.4826 * np.sqrt(2.0 / 3.0) * np.median(np.abs(stray[quiet])))
 
 
 def _cut(counts: Counts, feature: Feature) -> Counts:

@@ -101,10 +101,12 @@ def _known_gaps(model: FeatureModel) -> list[float]:
 def _limits(model: FeatureModel, start: FloatArray, within: Bounds | None) -> tuple[FloatArray, FloatArray]:
     low, high = model.lower.copy(), model.upper.copy()
     ratio, separation = model.index["ratio"], model.index["separation_nm"]
-    # the second line stays where there are data: outside it could be of any strength
+    # the second line stays where there are data: outside it could be of any strength; where the window was
+    # cut at the foot of a foreign line, inside by half a FWHM
     centre = start[model.index["centre_nm"]]
-    low[separation] = max(low[separation], model.x[0] - centre)
-    high[separation] = min(high[separation], model.x[-1] - centre)
+    margin = 0.0 if model.feature.reach_nm is None else 0.5 * model.feature.fwhm_nm
+    low[separation] = max(low[separation], model.x[0] + margin - centre)
+    high[separation] = min(high[separation], model.x[-1] - margin - centre)
     for gap in _known_gaps(model):
         if start[separation] > gap:
             low[separation] = max(low[separation], gap + KNOWN_ZONE_FWHM * model.feature.fwhm_nm)

@@ -143,13 +143,16 @@ def _export_here(journal_path: Path, out: Path) -> str | None:
 
 
 async def _export_in_child(journal_path: Path, out: Path) -> str | None:
-    child = await asyncio.create_subprocess_exec(
-        *(sys.executable, "-P", "-m", "daq.export", str(journal_path), str(out)),
-        stdin=asyncio.subprocess.DEVNULL,
-        stdout=asyncio.subprocess.PIPE,
-        stderr=asyncio.subprocess.PIPE,
-        start_new_session=True,  # Ctrl-C ends the run cleanly; its file is made all the same
-    )
+    try:
+        child = await asyncio.create_subprocess_exec(
+            *(sys.executable, "-P", "-m", "daq.export", str(journal_path), str(out)),
+            stdin=asyncio.subprocess.DEVNULL,
+            stdout=asyncio.subprocess.PIPE,
+            stderr=asyncio.subprocess.PIPE,
+            start_new_session=True,  # Ctrl-C ends the run cleanly; its file is made all the same
+        )
+    except OSError as error:  # no process or no memory to be had just now
+        return f"the export could not be started: {error}"
     try:
         printed, complained = await child.communicate()
     except asyncio.CancelledError:

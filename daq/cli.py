@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING, Any, NoReturn
 
 import click
 
-from drivers.errors import DataError, GratingdError, SettingsError
+from drivers.errors import DataError, DeviceError, GratingdError, SettingsError
 
 if TYPE_CHECKING:
     from daq.carry import Stopper
@@ -29,7 +29,7 @@ class Exit(IntEnum):
     DONE = 0
     MISTAKE = 2  # a command, a settings file or a data file; nothing was moved or written
     BENCH_FAULT = 3  # a run was stopped safely because of a device
-    BROKE_OFF = 4  # an internal error, or a journal or file that could not be written
+    BROKE_OFF = 4  # an internal error, or a journal or file that could not be written or read
     STOPPED = 5  # somebody stopped it before it was done
 
 
@@ -38,8 +38,8 @@ Exit codes:
   0  everything asked for was done (a limit reached is done too)
   2  a mistake in a command, a settings file or a data file
   3  a run was stopped safely because of a fault of the bench
-  4  an internal error, or a journal or file that could not be written
-  5  stopped by somebody before it was done (Ctrl-C, SIGTERM)
+  4  an internal error, or a journal or file that could not be written or read
+  5  stopped by somebody before it was done (Ctrl-C, SIGTERM, a terminal closed)
 """
 
 
@@ -177,7 +177,7 @@ def analyse(
             problems.append(str(error))
     for problem in problems:
         click.echo(f"gratingd: {problem}", err=True)
-    if not problems or runs:
+    if runs:
         _print_runs(runs, as_json)
     if problems:
         sys.exit(Exit.MISTAKE)
@@ -195,9 +195,10 @@ def recover(folder: Path, resume: bool, as_json: bool) -> None:
     from daq.recover import recover as recover_folder
 
     progress = _progress(live=resume, as_json=as_json)
+    problems: list[str] = []
 
     async def work(clock: Clock, stopper: Stopper) -> list[dict[str, Any]]:
-        return await recover_folder(
+        done = await recover_folder(
             folder,
             clock,
             resume=resume,
@@ -205,12 +206,14 @@ def recover(folder: Path, resume: bool, as_json: bool) -> None:
             on_run=progress.begin,
             stopper=stopper,
         )
+        problems.extend(done.problems)
+        return done.runs
 
     runs = _with_signals(work, progress, start_utc_ns=None)
-    if not runs and not as_json:
+    if not runs and not problems and not as_json:
         click.echo(f"nothing to recover in {folder}")
         return
-    _finish(runs, as_json)
+    _finish(runs, as_json, problems)
 
 
 # ---- parts ----------------------------------------------------------------------------------------------
@@ -247,7 +250,11 @@ def _carry_out(order: NightOrder, *, virtual: bool, live: bool, as_json: bool) -
 def _with_signals(
     work: Callable[[Clock, Stopper], Any], progress: Progress, *, start_utc_ns: int | None
 ) -> list[dict[str, Any]]:
-    """Run under real or virtual time; SIGINT and SIGTERM ask for a clean stop. Known errors exit."""
+    """Run under real or virtual time; a signal asks for a clean stop. Known errors exit.
+
+    A terminal that hangs up (SIGHUP) stops the run too, unless it was started to survive that (nohup): the
+    default would end the process with the shutter open.
+    """
     import asyncio
     import signal
 
@@ -258,11 +265,15 @@ def _with_signals(
     stopper = Stopper()
 
     async def attended(clock: Clock) -> list[dict[str, Any]]:
-        if not clock.is_virtual:
-            loop = asyncio.get_running_loop()
-            for number in (signal.SIGINT, signal.SIGTERM):
-                name = signal.Signals(number).name
-                loop.add_signal_handler(number, stopper.stop, StopReason.STOPPED_BY_USER, name)
+        loop = asyncio.get_running_loop()
+        for number in (signal.SIGINT, signal.SIGTERM, signal.SIGHUP):
+            if signal.getsignal(number) is signal.SIG_IGN:
+                continue
+            stop = (stopper.stop, StopReason.STOPPED_BY_USER, signal.Signals(number).name)
+            if clock.is_virtual:  # a loop without a socket to wake it by; it never waits
+                signal.signal(number, lambda *_, stop=stop: loop.call_soon_threadsafe(*stop))
+            else:
+                loop.add_signal_handler(number, *stop)
         result: list[dict[str, Any]] = await work(clock, stopper)
         return result
 
@@ -270,6 +281,8 @@ def _with_signals(
         return run_real(attended) if start_utc_ns is None else run_virtual(attended, start_utc_ns)
     except (SettingsError, DataError) as error:
         _die(Exit.MISTAKE, error)
+    except DeviceError as error:
+        _die(Exit.BENCH_FAULT, error)
     except GratingdError as error:
         _die(Exit.BROKE_OFF, error)
     except KeyboardInterrupt:
@@ -283,16 +296,16 @@ def _progress(*, live: bool, as_json: bool) -> Progress:
 
     if as_json:
         return Silent()
-    if live and sys.stderr.isatty():
+    if live and sys.stderr is not None and sys.stderr.isatty():
         return Live()
     return Lines(status_lines=live)
 
 
-def _finish(runs: list[dict[str, Any]], as_json: bool) -> None:
+def _finish(runs: list[dict[str, Any]], as_json: bool, problems: Sequence[str] = ()) -> None:
     """Print what came out, and end with the code that says how it went."""
     _print_runs(runs, as_json)
     reasons = {run["stop_reason"] for run in runs}
-    problems = [run["problem"] for run in runs if "problem" in run]
+    problems = [*problems, *(run["problem"] for run in runs if "problem" in run)]
     for problem in problems:
         click.echo(f"gratingd: {problem}", err=True)
     if problems or "internal-error" in reasons:
@@ -306,6 +319,8 @@ def _finish(runs: list[dict[str, Any]], as_json: bool) -> None:
 def _print_runs(runs: list[dict[str, Any]], as_json: bool) -> None:
     if as_json:
         click.echo(json.dumps({"runs": runs}, indent=2, allow_nan=False))
+        return
+    if not runs:
         return
     from daq.table import runs_table
 
@@ -338,4 +353,12 @@ def _new_folder(name: str) -> Path:
 
 def main() -> None:
     """The program, after the guard has looked at the packages."""
-    gratingd(prog_name="gratingd")
+    try:
+        gratingd(prog_name="gratingd")
+    except OSError as error:  # standard output on a full disk, say; devices and files have errors of their own
+        _die(Exit.BROKE_OFF, error)
+    except Exception:
+        import traceback
+
+        traceback.print_exc()
+        _die(Exit.BROKE_OFF, "this is a defect of gratingd; please report it with the lines above")

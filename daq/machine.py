@@ -90,8 +90,8 @@ class StartPoint:
 class StartLook:
     """Weigh the evidence up to `horizon` points. `final` asks for the conclusion.
 
-    `now` is everything counted, `swept` whole sweeps only, in which every position had its full dwell; `previous`
-    and `first` are `swept` as it was at the previous look and at the first.
+    `now` is everything counted, `swept` whole sweeps only, in which every position had its full dwell;
+    `previous` and `first` are `swept` as it was at the previous look and at the first.
     """
 
     horizon: int

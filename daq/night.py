@@ -19,6 +19,7 @@ from daq.records import StopReason, run_identity
 from daq.target import LoadedTarget
 from drivers.bench import LoadedBench
 from drivers.clock import Clock
+from drivers.errors import SettingsError
 from drivers.factory import load_factories, make
 from drivers.protocols import DriverContext
 
@@ -74,7 +75,7 @@ async def run_night(
     stopper = stopper or Stopper()
     heads = [_head(order, start_utc_ns, i, target) for i, target in enumerate(order.targets, start=1)]
     load_factories(order.bench)
-    order.out.mkdir(parents=True, exist_ok=True)
+    _make_folder(order.out)
     summaries: list[dict[str, Any]] = []
     with FolderLock(order.out):
         devices = open_devices(order.bench, clock, order.seed)
@@ -109,6 +110,14 @@ async def run_night(
             for problem in await devices.close():
                 log.warning("closing %s", problem)
     return summaries
+
+
+def _make_folder(out: Path) -> None:
+    try:
+        out.mkdir(parents=True, exist_ok=True)
+    except OSError as error:
+        problem = f"cannot be the folder of the files: {error.strerror}; give --out one that can be made"
+        raise SettingsError(str(out), [problem]) from error
 
 
 def _head(order: NightOrder, start_utc_ns: int, ordinal: int, target: LoadedTarget) -> dict[str, Any]:

@@ -1,12 +1,14 @@
 """What a person sees while a run goes on: a live table on a terminal, plain lines anywhere else.
 
-Both are observers of durable records. Nothing shown here is journalled, and nothing here can stop a run.
+Both are observers of durable records. Nothing shown here is journalled, and a terminal that goes away (a closed
+window, a pipe nobody reads any more) stops no run: from then on nothing is shown.
 """
 
 from __future__ import annotations
 
+import contextlib
 import sys
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from typing import Any, Protocol, TextIO
 
 from daq.machine import Machine
@@ -45,7 +47,8 @@ class Lines:
     """One line for each thing worth knowing, and one every half minute between."""
 
     def __init__(self, stream: TextIO | None = None, *, status_lines: bool = True) -> None:
-        self._stream = stream or sys.stderr
+        # without a stream (standard error closed from the start) print() would turn to standard output
+        self._stream: TextIO | None = stream or sys.stderr
         self._status_lines = status_lines
         self._head: Mapping[str, Any] = {}
         self._last_ns = 0
@@ -67,10 +70,15 @@ class Lines:
             self._say(f"  {duration(notice.machine.bench_ns * 1e-9):>12}  {text}")
 
     def close(self) -> None:
-        self._stream.flush()
+        """Nothing is held back."""
 
     def _say(self, text: str) -> None:
-        print(text, file=self._stream, flush=True)
+        if self._stream is None:
+            return
+        try:
+            print(text, file=self._stream, flush=True)
+        except OSError:
+            self._stream = None
 
 
 class Live:
@@ -85,27 +93,43 @@ class Live:
         self._head: Mapping[str, Any] = {}
         self._shown_ns = -REFRESH_NS
         self._last_point: Mapping[str, Any] | None = None
+        self._is_gone = False
         self._live.start()
 
     def begin(self, head: Mapping[str, Any]) -> None:
         self._head = head
         self._shown_ns = -REFRESH_NS
-        self._console.print(f"{head['target']['name']}: run {head['run_id']}", highlight=False, markup=False)
+        self._last_point = None
+        self._attempt(lambda: self._say(f"{head['target']['name']}: run {head['run_id']}"))
 
     def observe(self, notice: Notice) -> None:
+        self._attempt(lambda: self._observe(notice))
+
+    def close(self) -> None:
+        with contextlib.suppress(OSError):
+            self._live.stop()
+
+    def _attempt(self, show: Callable[[], None]) -> None:
+        if self._is_gone:
+            return
+        try:
+            show()
+        except OSError:
+            self._is_gone = True
+
+    def _say(self, text: str) -> None:
+        self._console.print(text, highlight=False, markup=False)
+
+    def _observe(self, notice: Notice) -> None:
         if notice.kind == Kind.POINT:
             self._last_point = notice.body
         else:
             text = event_in_words(notice, self._head)
             if text is not None:
-                when = duration(notice.machine.bench_ns * 1e-9)
-                self._console.print(f"  {when:>12}  {text}", highlight=False, markup=False)
+                self._say(f"  {duration(notice.machine.bench_ns * 1e-9):>12}  {text}")
         if notice.machine.bench_ns - self._shown_ns >= REFRESH_NS or notice.kind != Kind.POINT:
             self._shown_ns = notice.machine.bench_ns
             self._live.update(self._table(notice.machine), refresh=True)
-
-    def close(self) -> None:
-        self._live.stop()
 
     def _table(self, machine: Machine) -> Any:
         from rich.table import Table

@@ -16,7 +16,7 @@ from daq.records import Kind, Record
 from daq.runfile import read_run
 from drivers.bench import LoadedBench, read_bench
 from drivers.clock import Clock
-from drivers.errors import DataError
+from drivers.errors import DataError, GratingdError
 from drivers.slug import slug_of
 
 
@@ -36,14 +36,16 @@ class Left:
         return self.path.with_suffix(".h5")
 
 
-def find_journals(folder: Path) -> list[Left]:
-    """Every journal of the folder, by name. Raises DataError without a folder, JournalError if damaged."""
-    if not folder.is_dir():
-        raise DataError(f"{folder}: is no folder; give the folder that holds the .journal files")
-    return [examine(path) for path in sorted(folder.glob("*.journal"))]
+@dataclass(frozen=True, slots=True)
+class Recovered:
+    """One summary for each run made whole, and what stood in the way of the others."""
+
+    runs: list[dict[str, Any]]
+    problems: list[str]
 
 
 def examine(path: Path) -> Left:
+    """Raises JournalError if it is damaged, of a newer format or no journal."""
     records = read_journal(path)
     head = next(records).body
     points = sessions = 0
@@ -74,25 +76,35 @@ async def recover(
     observe: Observer,
     on_run: Callable[[dict[str, Any]], None],
     stopper: Stopper,
-) -> list[dict[str, Any]]:
-    """Every run of the folder concluded and with a complete file; returns one summary for each that was not.
+) -> Recovered:
+    """Every run of the folder concluded and with a complete file; a summary for each that was not.
 
     Without `resume` no device is touched: a run that had not ended is concluded from the points it has, with
     the stop reason "interrupted". With it the bench of the journal's head is opened and the run carried on.
+    A journal that cannot be used is a problem told and costs none of the others. Raises DataError without a
+    folder, JournalError if another gratingd works in it.
     """
-    summaries = []
+    if not folder.is_dir():
+        raise DataError(f"{folder}: is no folder; give the folder that holds the .journal files")
+    done = Recovered([], [])
     with FolderLock(folder):
-        for left in find_journals(folder):
-            if left.concluded is not None and _has_complete_file(left):
-                continue
-            on_run(left.head)
-            if left.concluded is not None:
-                summaries.append(await with_file(left.concluded["summary"], left.path, clock))
+        for path in sorted(folder.glob("*.journal")):
+            try:
+                left = examine(path)
+                if left.concluded is not None and _has_complete_file(left):
+                    continue
+                on_run(left.head)
+                if left.concluded is not None:
+                    summary = await with_file(left.concluded["summary"], path, clock)
+                else:
+                    summary = await _carry_on(left, clock, resume, observe, stopper)
+            except GratingdError as error:
+                done.problems.append(str(error))
             else:
-                summaries.append(await _carry_on(left, clock, resume, observe, stopper))
+                done.runs.append(summary)
             if stopper.reason is not None:
                 break
-    return summaries
+    return done
 
 
 def _has_complete_file(left: Left) -> bool:

@@ -74,7 +74,7 @@ class Runner:
         self._looker = looker
         self._conclude = conclude
         self._clock = clock
-        self._observe = observe
+        self._observe: Callable[[Notice], None] | None = observe
         self._start_ns = clock.monotonic_ns()
         self._inbox: asyncio.Queue[Ending] = asyncio.Queue()
         self._outbox: asyncio.Queue[Notice | None] = asyncio.Queue()
@@ -144,11 +144,16 @@ class Runner:
             self._show(notice)
 
     def _show(self, notice: Notice) -> None:
+        if self._observe is None:
+            return
         try:
             self._observe(notice)
-        except Exception as error:  # a display that fails must not cost the night
+        except Exception as error:
+            # Told once and never asked again: each failure is a record, and each record would be shown.
+            self._observe = None
             log.exception("showing record %d failed", notice.seq)
-            self.post(Kind.FAULT, self._fault("display", error)) if not self._machine.ended else None
+            if not self._machine.ended:
+                self.post(Kind.FAULT, self._fault("display", error))
 
     def _time_is_up(self) -> None:
         self.post(Kind.DEADLINE, {"at_ns": self.at_ns(), "limit": "time"})

@@ -23,7 +23,8 @@ def pulse_by_pulse(rate: float, dead_time: float, gate: float, gates: int, seed:
     most = int(1.5 * rate * (gate + lead) / (1.0 + rate * dead_time) + 80)
     arrivals = np.cumsum(dead_time + rng.exponential(wait, (gates, most)), axis=1)
     assert arrivals[:, -1].min() > lead + gate
-    return np.sum((arrivals > lead) & (arrivals <= lead + gate), axis=1).astype(np.float64)
+    made: FloatArray = np.sum((arrivals > lead) & (arrivals <= lead + gate), axis=1).astype(np.float64)
+    return made
 
 
 def test_textbook_rate() -> None:
@@ -60,9 +61,9 @@ def test_deviance_is_the_likelihood_ratio() -> None:
     from scipy.stats import norm, poisson
 
     data, mean, sigma = np.array([0.0, 3.0, 17.0]), np.array([0.7, 4.2, 15.0]), np.array([1.0, 2.0, 4.0])
-    saturated = poisson.logpmf(data, np.maximum(data, 1e-300)).sum()
-    assert deviance(data, mean, None) == pytest.approx(2.0 * (saturated - poisson.logpmf(data, mean).sum()))
-    gauss = norm.logpdf(data, data, sigma).sum() - norm.logpdf(data, mean, sigma).sum()
+    saturated = np.sum(poisson.logpmf(data, np.maximum(data, 1e-300)))
+    assert deviance(data, mean, None) == pytest.approx(2.0 * (saturated - np.sum(poisson.logpmf(data, mean))))
+    gauss = np.sum(norm.logpdf(data, data, sigma)) - np.sum(norm.logpdf(data, mean, sigma))
     assert deviance(data, mean, sigma) == pytest.approx(2.0 * gauss)
 
 

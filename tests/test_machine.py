@@ -9,7 +9,8 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from machine_bench import GATE_NS, Play, plan, replay, state_of
 
-from daq.machine import LEGAL, Action, Halt, MachineError, StartPoint
+from analysis.allocate import next_sweep
+from daq.machine import LEGAL, Action, Halt, Machine, MachineError, StartLook, StartPoint
 from daq.records import KINDS, Kind, StopReason
 
 CHOICES = st.lists(st.integers(min_value=0, max_value=4095), max_size=90)
@@ -287,8 +288,8 @@ def test_an_unexpected_fault_elsewhere_halts_the_point() -> None:
 
 
 def test_claims_rest_on_whole_sweeps_only() -> None:
-    """A sweep that is under way, or that lost a position to a flag, is in the estimate but not in the evidence:
-    its share of a comb would otherwise be weighed against the whole comb."""
+    """A sweep that is under way, or that lost a position to a flag, is in the estimate but not in the
+    evidence: its share of a comb would otherwise be weighed against the whole comb."""
     play = Play()
     visits = len(play.machine._visits)
     play.finish()
@@ -306,3 +307,158 @@ def test_claims_rest_on_whole_sweeps_only() -> None:
     assert sum(row[3] for row in final.now.rows) > sum(row[3] for row in final.swept.rows)
     assert {group for _, group in seconds} == {0, 2}, "the comb of the flagged sweep is left out"
     assert set(seconds.values()) == {1}, "every position of a comb was counted equally often"
+
+
+def test_the_words_of_the_actions_stand_in_journals_and_do_not_change() -> None:
+    """Fault records carry them, and people read them on the screen."""
+    assert [str(action) for action in Action] == ["nothing", "prepare", "point", "look", "halt", "safe"]
+
+
+def test_a_machine_before_its_first_session_has_done_nothing() -> None:
+    """What a display may read before the first record."""
+    machine = Machine(plan())
+    assert machine.action is Action.NOTHING
+    assert (machine.paused, machine.stop, machine.ended) == (False, None, False)
+    assert (machine.points, machine.light_ns, machine.bench_ns, machine.sweeps_done) == (0, 0, 0, 0)
+    assert (machine.looks, machine.conclusion) == ([], None)
+
+
+def test_the_first_sweep_is_visited_whole_and_in_order() -> None:
+    """Dark first, then every position of the comb, each with its full dwell, numbered from 0."""
+    play = Play()
+    visits = next_sweep(play.machine.window, number=0)
+    for _ in range(len(visits) + 2):
+        play.finish()
+    first = [start for start in play.points_started if start.sweep == 0]
+    assert [(start.index, start.visit) for start in first] == list(enumerate(visits))
+    assert (play.points_started[len(visits)].sweep, play.points_started[len(visits)].index) == (1, 0)
+
+
+def _until_look(play: Play) -> StartLook:
+    while not play.looks_asked:
+        play.finish()
+    return play.looks_asked[0]
+
+
+@pytest.mark.parametrize("late", [False, True])
+def test_the_answer_of_a_look_applies_six_visits_after_its_horizon(late: bool) -> None:
+    """Not sooner when it is there at once, not later when it has to be waited for."""
+    play = Play(settle_at_look=1)
+    horizon = _until_look(play).horizon
+    if not late:
+        play.answer_look()
+    for _ in range(6):
+        assert play.machine.stop is None
+        assert play.machine.looks == []
+        play.finish()
+    if late:
+        assert play.outstanding is None
+        assert play.machine.action is Action.LOOK
+        play.answer_look()
+    assert play.machine.stop is StopReason.GOAL_REACHED
+    assert len(play.machine.looks) == 1
+    assert play.machine.points == horizon + 6
+
+
+def test_a_sweep_shorter_than_the_lag_waits_at_its_last_visit() -> None:
+    """The next look needs the answer of this one: it applies before the sweep is over."""
+    narrow = plan()["window"] | {"highest_steps": 6}  # two or three positions and a dark a sweep
+    play = Play(plan(window=narrow))
+    horizon = 0
+    while not play.machine.tally.can_be_weighed and play.machine.points < 200:
+        play.finish()
+    assert not play.looks_asked, "seven places in three groups are never enough to weigh"
+    narrow = plan()["window"] | {"highest_steps": 12}
+    play = Play(plan(window=narrow))
+    horizon = _until_look(play).horizon
+    while play.outstanding is not None:
+        play.finish()
+    waits_after = play.machine.points - horizon
+    assert waits_after == len(next_sweep(play.machine.window, number=play.machine.sweeps_done)) - 1 < 6
+    play.answer_look()
+    assert isinstance(play.outstanding, StartPoint)
+
+
+def test_each_look_is_told_of_the_last_and_of_the_first() -> None:
+    """`previous` and `first` are their whole sweeps, `previous_look` is the last one's answer."""
+    play = Play()
+    asked: list[StartLook] = []
+    while len(asked) < 4:
+        asked.append(_until_look(play))
+        play.answer_look()
+        assert play.machine.stop is None
+        while len(play.machine.looks) < len(asked):
+            play.finish()
+    assert [(look.previous, look.first, look.previous_look) for look in asked[:1]] == [(None, None, None)]
+    for before, look in itertools.pairwise(asked):
+        assert look.previous == before.swept
+        assert look.first == asked[0].swept
+        assert look.previous_look == play.machine.looks[asked.index(before)]
+        assert not look.final
+    assert len({look.swept for look in asked}) == 4
+
+
+@pytest.mark.parametrize("kind", [Kind.HEAD, "nonsense"])
+def test_what_is_no_record_of_a_session_is_refused(kind: str) -> None:
+    """The head is the machine's plan, never one of its records."""
+    with pytest.raises(MachineError, match=f"'{kind}' is not legal"):
+        Play().machine.admit(kind)
+
+
+def test_bench_time_adds_up_over_sessions_and_never_steps_back() -> None:
+    """A session's times start at zero; a record that began before the last one ended changes nothing."""
+    play = _measuring(2)
+    first_ns = play.machine.bench_ns
+    assert first_ns == play.now_ns == 5 * GATE_NS  # prepare 1, two dwells of 2
+    play.now_ns = 3 * GATE_NS
+    _wish(play, "resume")
+    assert play.machine.bench_ns == first_ns
+    play.session(devices=True)
+    assert play.machine.bench_ns == first_ns
+    play.finish()
+    assert play.machine.bench_ns == first_ns + GATE_NS
+    play.session(devices=True)
+    play.finish()
+    assert play.machine.bench_ns == first_ns + 2 * GATE_NS
+
+
+def test_an_illegal_wish_is_an_error_of_the_program() -> None:
+    """Nobody may take a misspelt stop for a stop."""
+    play = _measuring()
+    with pytest.raises(MachineError, match="unknown wish 'stpo'"):
+        play.machine.step(Kind.WISH, {"at_ns": 0, "wish": "stpo", "reason": "", "source": "test"})
+
+
+def test_a_repeatable_fault_during_a_pause_still_closes_the_shutter() -> None:
+    """The link fails before the dwell has ended: nobody prepares while paused, so the bench is made safe."""
+    play = _measuring()
+    _wish(play, "pause")
+    play.finish(8)
+    assert play.machine.action is Action.SAFE
+    play.finish()
+    assert play.machine.action is Action.NOTHING
+    _wish(play, "resume")
+    assert play.machine.action is Action.PREPARE, "the position is not trusted after a fault"
+
+
+def test_a_fault_while_preparing_during_a_pause_makes_safe() -> None:
+    """A preparation that broke off may have left the motor running."""
+    play = Play()
+    _wish(play, "pause")
+    play.finish(4)
+    assert play.machine.action is Action.SAFE
+
+
+def test_a_pause_does_not_wait_for_a_late_look() -> None:
+    """The shutter closes at once; after the resume the machine waits for the answer again."""
+    play = Play()
+    _until_look(play)
+    while play.outstanding is not None:
+        play.finish()
+    _wish(play, "pause")
+    assert play.machine.action is Action.SAFE
+    play.finish()
+    _wish(play, "resume")
+    assert (play.machine.action, play.outstanding) == (Action.LOOK, None)
+    play.answer_look()
+    assert play.machine.action is Action.POINT

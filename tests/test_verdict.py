@@ -17,11 +17,11 @@ from analysis.verdict import look
 
 @pytest.mark.slow
 def test_repeated_looks_raise_no_more_false_alarms_than_stated() -> None:
-    """True singles of any width, background, slope and 1 % of skew, 8 looks each at a level of 0.05.
+    """True singles of any width, background, slope and 1 % of skew, 7 looks each at a level of 0.05.
 
-    Thirty of them raise 6 alarms or more with a chance of 3e-3 (binomial) if the level holds."""
+    Twenty of them raise 5 alarms or more with a chance of 3e-3 (binomial) if the level holds."""
     alarms = []
-    for seed in range(100, 130):
+    for seed in range(100, 120):
         draw = np.random.Generator(np.random.Philox(key=[seed, 1]))
         lamp = Lamp(
             seed,
@@ -31,10 +31,10 @@ def test_repeated_looks_raise_no_more_false_alarms_than_stated() -> None:
             skewness=draw.choice([-0.01, 0.0, 0.01]),
             peak_per_s=draw.choice([50.0, 200.0, 2000.0]),
         )
-        last = night(lamp, question(false_alarm=0.05), looks=(2, 3, 4, 6, 8, 12, 16, 24), stop=False)[-1]
+        last = night(lamp, question(false_alarm=0.05), looks=(2, 3, 4, 6, 8, 12, 16), stop=False)[-1]
         if last.max_log_e_pair >= last.bound_pair:
             alarms.append(seed)
-    assert len(alarms) < 6, f"false pairs with seeds {alarms}"
+    assert len(alarms) < 5, f"false pairs with seeds {alarms}"
 
 
 @pytest.mark.slow
@@ -263,8 +263,19 @@ def test_a_known_neighbour_is_no_second_line() -> None:
     known = CENTRE_NM - 2.3 * FWHM_NM
     asked = question()
     feature = replace(asked.feature, known_lines_nm=(known,))
-    lamp = Lamp(53, third_line=0.5)
+    lamp = Lamp(53, third_line=0.5, peak_per_s=1000.0)
     answers = night(lamp, replace(asked, feature=feature))
     assert answers[-1].verdict == "single"
     assert answers[-1].single.value("known_1_area") > 0.0
     assert isinstance(feature, Feature)
+
+
+@pytest.mark.parametrize("told", [0.9, 1.1])
+def test_slits_not_as_stated_make_no_pair(told: float) -> None:
+    """Slits stated a tenth too narrow or too wide: neither model fits, and no second line is claimed."""
+    asked = question()
+    feature = replace(asked.feature, box_widths_nm=(told * 0.018, told * 0.018))
+    lamp = Lamp(7, peak_per_s=2000.0)
+    answers = night(lamp, replace(asked, feature=feature), looks=(2, 4, 8, 16, 32), stop=False)
+    assert "pair" not in [answer.verdict for answer in answers]
+    assert "poor-fit" in answers[-1].flags
