@@ -6,6 +6,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
+from analysis.digits import with_uncertainty
 from analysis.exclusion import exclusion_curve
 from analysis.fit import FitResult, inverse
 from analysis.model import FeatureModel
@@ -248,8 +249,8 @@ def explain(
     pm = 1e3
     if look.verdict == "pair" and look.separation_nm is not None and look.separation_u_nm is not None:
         said.append(
-            f"two lines, {look.separation_nm * pm:.3g} +- {look.separation_u_nm * pm:.2g} pm apart, "
-            f"strengths 1 : {look.ratio:.3g}"
+            f"two lines, {with_uncertainty(look.separation_nm * pm, look.separation_u_nm * pm)} pm apart, "
+            f"strengths 1 : {with_uncertainty(look.ratio, look.ratio_u)}"
         )
     if look.verdict == "single":
         said.append(

@@ -14,7 +14,7 @@ from analysis.counting import Counts
 from analysis.question import Question, to_json
 from analysis.verdict import guess_feature, weigh_once
 from daq.looks import answer
-from daq.machine import Machine, StartLook
+from daq.machine import Machine, MachineError, StartLook
 from daq.plan import in_medium
 from daq.records import Body, Kind
 from daq.runfile import RunData, read_run
@@ -51,7 +51,13 @@ def analyse(path: Path, asked: Asked) -> dict[str, Any]:
 
 def _analyse_run(run: RunData) -> dict[str, Any]:
     """The run's looks and its conclusion computed anew, cold, from the records in the file alone."""
-    machine, look = redo(run)
+    try:
+        machine, look = redo(run)
+    except (KeyError, TypeError, ValueError, MachineError) as error:
+        raise DataError(
+            f"{run.path}: damaged: its records do not fit together ({type(error).__name__}: {error}); "
+            "make it again with 'gratingd recover' if its journal is still there"
+        ) from error
     recorded = None if run.conclusion is None else run.conclusion["look"]
     return {
         "target": run.head["target"]["name"],
@@ -159,6 +165,19 @@ def _analyse_spectrum(spectrum: Spectrum, asked: Asked) -> dict[str, Any]:
     }
 
 
+def _check_within(spectrum: Spectrum, line_nm: float | None, known_nm: tuple[float, ...]) -> None:
+    """A line the file does not hold would be answered for as if it were there. A known one may stand outside
+    and reach in with its wing, but not further away than the file is wide."""
+    lowest, highest = float(spectrum.wavelength_nm[0]), float(spectrum.wavelength_nm[-1])
+    width = highest - lowest
+    told = f"the file covers {lowest:g} to {highest:g} nm in {spectrum.medium}"
+    if line_nm is not None and not lowest <= line_nm <= highest:
+        raise ValueError(f"a line expected at {line_nm:g} nm is not in it: {told}")
+    for known in known_nm:
+        if not lowest - width <= known <= highest + width:
+            raise ValueError(f"a known line at {known:g} nm is nowhere near: {told}")
+
+
 def _question(spectrum: Spectrum, counts: Counts, asked: Asked) -> Question:
     target = asked.target
     line_nm, known_nm = asked.line_nm, asked.known_lines_nm
@@ -168,6 +187,7 @@ def _question(spectrum: Spectrum, counts: Counts, asked: Asked) -> Question:
         known_nm = tuple(
             in_medium(w, given.medium, spectrum.medium, at_bench=False) for w in given.known_lines_nm
         )
+    _check_within(spectrum, line_nm, known_nm)
     feature = guess_feature(counts)
     if line_nm is not None:  # whoever names the line also names its neighbours: the whole file is the window
         feature = replace(feature, wavelength_nm=line_nm, known_lines_nm=known_nm, reach_nm=None)

@@ -2,9 +2,10 @@
 
 from __future__ import annotations
 
+import contextlib
 import json
 import sys
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from enum import IntEnum
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, NoReturn
@@ -14,6 +15,8 @@ import click
 from drivers.errors import DataError, DeviceError, GratingdError, SettingsError
 
 if TYPE_CHECKING:
+    from asyncio import AbstractEventLoop
+
     from daq.carry import Stopper
     from daq.night import NightOrder
     from daq.progress import Progress
@@ -250,32 +253,18 @@ def _carry_out(order: NightOrder, *, virtual: bool, live: bool, as_json: bool) -
 def _with_signals(
     work: Callable[[Clock, Stopper], Any], progress: Progress, *, start_utc_ns: int | None
 ) -> list[dict[str, Any]]:
-    """Run under real or virtual time; a signal asks for a clean stop. Known errors exit.
-
-    A terminal that hangs up (SIGHUP) stops the run too, unless it was started to survive that (nohup): the
-    default would end the process with the shutter open.
-    """
+    """Run under real or virtual time; a signal asks for a clean stop. Known errors exit."""
     import asyncio
-    import signal
 
     from daq.carry import Stopper
-    from daq.records import StopReason
     from drivers.clock import run_real, run_virtual
 
     stopper = Stopper()
 
     async def attended(clock: Clock) -> list[dict[str, Any]]:
-        loop = asyncio.get_running_loop()
-        for number in (signal.SIGINT, signal.SIGTERM, signal.SIGHUP):
-            if signal.getsignal(number) is signal.SIG_IGN:
-                continue
-            stop = (stopper.stop, StopReason.STOPPED_BY_USER, signal.Signals(number).name)
-            if clock.is_virtual:  # a loop without a socket to wake it by; it never waits
-                signal.signal(number, lambda *_, stop=stop: loop.call_soon_threadsafe(*stop))
-            else:
-                loop.add_signal_handler(number, *stop)
-        result: list[dict[str, Any]] = await work(clock, stopper)
-        return result
+        with _signals(asyncio.get_running_loop(), stopper, clock):
+            result: list[dict[str, Any]] = await work(clock, stopper)
+            return result
 
     try:
         return run_real(attended) if start_utc_ns is None else run_virtual(attended, start_utc_ns)
@@ -289,6 +278,36 @@ def _with_signals(
         _die(Exit.STOPPED, "stopped; unfinished journals can be recovered: gratingd recover FOLDER")
     finally:
         progress.close()
+
+
+@contextlib.contextmanager
+def _signals(loop: AbstractEventLoop, stopper: Stopper, clock: Clock) -> Iterator[None]:
+    """SIGINT, SIGTERM and SIGHUP ask for a clean stop, each time they come.
+
+    SIGHUP, a terminal that was closed, would otherwise end the process with the shutter open; a run started
+    to survive that (nohup) ignores it and goes on.
+    """
+    import signal
+
+    from daq.records import StopReason
+
+    def stop(number: int) -> None:
+        stopper.stop(StopReason.STOPPED_BY_USER, signal.Signals(number).name)
+
+    before = {number: signal.getsignal(number) for number in (signal.SIGINT, signal.SIGTERM, signal.SIGHUP)}
+    attended = [number for number, handler in before.items() if handler is not signal.SIG_IGN]
+    for number in attended:
+        if clock.is_virtual:  # a loop without a socket to wake it by, but it never waits
+            signal.signal(number, lambda given, _: loop.call_soon_threadsafe(stop, given))
+        else:
+            loop.add_signal_handler(number, stop, number)
+    try:
+        yield
+    finally:
+        for number in attended:
+            if not clock.is_virtual:
+                loop.remove_signal_handler(number)
+            signal.signal(number, before[number])
 
 
 def _progress(*, live: bool, as_json: bool) -> Progress:
@@ -355,7 +374,7 @@ def main() -> None:
     """The program, after the guard has looked at the packages."""
     try:
         gratingd(prog_name="gratingd")
-    except OSError as error:  # standard output on a full disk, say; devices and files have errors of their own
+    except OSError as error:  # standard output on a full disk; devices and files have errors of their own
         _die(Exit.BROKE_OFF, error)
     except Exception:
         import traceback

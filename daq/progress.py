@@ -1,7 +1,7 @@
 """What a person sees while a run goes on: a live table on a terminal, plain lines anywhere else.
 
-Both are observers of durable records. Nothing shown here is journalled, and a terminal that goes away (a closed
-window, a pipe nobody reads any more) stops no run: from then on nothing is shown.
+Both are observers of durable records. Nothing shown here is journalled, and a terminal that goes away (a
+closed window, a pipe nobody reads any more) stops no run: from then on nothing is shown.
 """
 
 from __future__ import annotations

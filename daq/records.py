@@ -6,7 +6,6 @@ integer nanoseconds since the session began (`at_ns`), counts and steps are inte
 
 from __future__ import annotations
 
-import re
 from collections.abc import Mapping
 from dataclasses import dataclass
 from datetime import UTC, datetime, timedelta
@@ -59,11 +58,6 @@ class Record:
     seq: int
     kind: str
     body: dict[str, Any]
-
-
-def slug(name: str) -> str:
-    """`name` in lower-case ASCII letters, digits and single hyphens, at most 48 characters."""
-    return re.sub(r"[^a-z0-9]+", "-", name.lower()).strip("-")[:48].strip("-") or "unnamed"
 
 
 def utc_stamp(utc_ns: int) -> str:

@@ -9,8 +9,8 @@ from typing import Any
 
 from daq.carry import Observer, Stopper, carry_run, with_file
 from daq.head import path_of
-from daq.journal import FolderLock, Journal, read_journal
-from daq.machine import Machine
+from daq.journal import FolderLock, Journal, JournalError, read_journal
+from daq.machine import Machine, MachineError
 from daq.night import open_devices
 from daq.records import Kind, Record
 from daq.runfile import read_run
@@ -44,6 +44,13 @@ class Recovered:
     problems: list[str]
 
 
+def find_journals(folder: Path) -> list[Path]:
+    """Every journal of the folder, by name. Raises DataError without a folder."""
+    if not folder.is_dir():
+        raise DataError(f"{folder}: is no folder; give the folder that holds the .journal files")
+    return sorted(folder.glob("*.journal"))
+
+
 def examine(path: Path) -> Left:
     """Raises JournalError if it is damaged, of a newer format or no journal."""
     records = read_journal(path)
@@ -59,12 +66,22 @@ def examine(path: Path) -> Left:
 
 
 def refold(path: Path, head: dict[str, Any]) -> Machine:
-    """The machine as it stood when the last record was acknowledged."""
-    machine = Machine(head["plan"])
+    """The machine as it stood when the last record was acknowledged.
+
+    Raises JournalError if the records cannot have followed each other.
+    """
     records = read_journal(path)
-    next(records)
-    for record in records:
-        machine.step(record.kind, record.body)
+    seq = next(records).seq
+    try:
+        machine = Machine(head["plan"])
+        for record in records:
+            seq = record.seq
+            machine.step(record.kind, record.body)
+    except (KeyError, TypeError, ValueError, MachineError) as error:
+        raise JournalError(
+            f"{path}: damaged: record {seq} does not fit ({type(error).__name__}: {error}); "
+            "restore the journal from a copy"
+        ) from error
     return machine
 
 
@@ -84,11 +101,10 @@ async def recover(
     A journal that cannot be used is a problem told and costs none of the others. Raises DataError without a
     folder, JournalError if another gratingd works in it.
     """
-    if not folder.is_dir():
-        raise DataError(f"{folder}: is no folder; give the folder that holds the .journal files")
+    journals = find_journals(folder)
     done = Recovered([], [])
     with FolderLock(folder):
-        for path in sorted(folder.glob("*.journal")):
+        for path in journals:
             try:
                 left = examine(path)
                 if left.concluded is not None and _has_complete_file(left):

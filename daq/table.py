@@ -9,7 +9,8 @@ from typing import Any, Literal
 from rich.console import Console
 from rich.table import Table
 
-from daq.wording import NOTHING, duration, with_uncertainty
+from analysis.digits import NOTHING, with_uncertainty
+from daq.wording import duration
 
 WIDTH = 110
 

@@ -1,4 +1,4 @@
-"""Numbers as people read them: as many digits as the uncertainty allows."""
+"""Looks, durations and what is still to be done, in words."""
 
 from __future__ import annotations
 
@@ -6,17 +6,7 @@ import math
 from collections.abc import Mapping
 from typing import Any
 
-NOTHING = "-"
-
-
-def with_uncertainty(value: float | None, u: float | None) -> str:
-    """`28.93 ± 0.41`: the uncertainty with two digits, the value to the same place."""
-    if value is None:
-        return NOTHING
-    if u is None or not math.isfinite(u) or u <= 0:
-        return f"{value:.4g}"
-    places = max(0, 1 - math.floor(math.log10(u)))
-    return f"{value:.{places}f} ± {u:.{places}f}"
+from analysis.digits import NOTHING, with_uncertainty
 
 
 def duration(seconds: float | None) -> str:

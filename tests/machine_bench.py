@@ -180,8 +180,6 @@ class Play:
     def answer_look(self) -> None:
         request = self.looks_asked.pop(0)
         look = {"goal_reached": len(self.machine.looks) + 1 >= self.settle_at_look}
-        if self.machine.action is Action.LOOK:
-            self.outstanding = None
         self.record(Kind.LOOK, horizon=request.horizon, look=look)
 
     # ---- play -------------------------------------------------------------------------------------------

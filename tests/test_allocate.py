@@ -207,6 +207,27 @@ def test_sums_do_not_depend_on_the_order_of_the_points(
 
 
 @settings(deadline=None, derandomize=True)
+@given(points=POINTS, more=POINTS)
+def test_including_a_tally_is_adding_its_points(
+    points: list[tuple[int, int, bool, int, int]], more: list[tuple[int, int, bool, int, int]]
+) -> None:
+    """What was summed apart (a sweep) sums up to the same; the tally that is included stays as it was."""
+    whole, part = tally_of(points), tally_of(more)
+    before = part.snapshot()
+    whole.include(part)
+    assert whole.snapshot() == tally_of(points + more).snapshot()
+    assert part.snapshot() == before
+
+
+def test_a_tally_goes_its_own_way_after_it_was_included() -> None:
+    """The sums are copied, not shared."""
+    whole, part = Tally(), tally_of([(0, 0, True, 5, 50)])
+    whole.include(part)
+    part.add(steps=0, group=0, light=True, counts=1, gate_ns=10)
+    assert whole.snapshot().rows == ((0, 0, 5, 50),)
+
+
+@settings(deadline=None, derandomize=True)
 @given(points=POINTS)
 def test_a_snapshot_comes_back_from_json(points: list[tuple[int, int, bool, int, int]]) -> None:
     """Looks cross a process boundary as JSON."""

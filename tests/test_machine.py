@@ -462,3 +462,93 @@ def test_a_pause_does_not_wait_for_a_late_look() -> None:
     assert (play.machine.action, play.outstanding) == (Action.LOOK, None)
     play.answer_look()
     assert play.machine.action is Action.POINT
+
+
+@pytest.mark.parametrize("ending", [0, 1, 2, 8])
+def test_a_second_pause_ends_its_own_dwell(ending: int) -> None:
+    """However the first dwell ended (whole, halted, cut short, by a fault), the second is asked to end."""
+    play = _measuring()
+    _wish(play, "pause")
+    assert play.letting_go
+    play.finish(ending)
+    play.finish()  # made safe
+    _wish(play, "resume")
+    while not isinstance(play.outstanding, StartPoint):
+        play.finish()
+    assert not play.letting_go
+    _wish(play, "pause")
+    assert play.letting_go
+
+
+def test_a_new_session_forgets_the_pause_and_what_it_asked_of_the_hands() -> None:
+    """Whoever resumes a run wants it to go on; the hands of the last session are gone."""
+    play = _measuring()
+    _wish(play, "pause")
+    play.session(devices=True)
+    assert play.machine.action is Action.PREPARE
+    play.finish()
+    assert isinstance(play.outstanding, StartPoint)
+    _wish(play, "pause")
+    assert play.letting_go
+
+
+def test_a_new_session_counts_faults_anew() -> None:
+    """Three repairs each: somebody has looked at the bench in between."""
+    play = _measuring()
+    for _ in range(2):
+        for _ in range(3):
+            play.finish(8)
+            play.finish()
+        assert isinstance(play.outstanding, StartPoint)
+        play.session(devices=True)
+        play.finish()
+    play.finish(8)
+    assert play.machine.stop is None
+
+
+def test_a_pause_while_preparing_needs_no_safe_stop() -> None:
+    """A prepared bench has its shutter closed and its drive at rest."""
+    play = Play()
+    _wish(play, "pause")
+    play.finish()
+    assert (play.machine.action, play.outstanding) == (Action.NOTHING, None)
+    _wish(play, "resume")
+    assert play.machine.action is Action.POINT
+
+
+def _look(play: Play, horizon: int, *, goal_reached: bool) -> None:
+    play.record(Kind.LOOK, horizon=horizon, look={"goal_reached": goal_reached})
+
+
+def test_only_the_first_answer_to_the_look_that_was_asked_counts() -> None:
+    """Answers to another horizon, second answers and answers nobody asked for change nothing."""
+    play = _measuring()
+    _look(play, play.machine.points, goal_reached=True)
+    horizon = _until_look(play).horizon
+    for other in (horizon - 1, horizon + 1):
+        _look(play, other, goal_reached=True)
+    play.finish()
+    _look(play, horizon, goal_reached=False)
+    _look(play, horizon, goal_reached=True)
+    play.looks_asked.clear()
+    for _ in range(6):
+        play.finish()
+    assert play.machine.looks == [{"goal_reached": False}]
+    assert play.machine.stop is None
+
+
+def test_a_late_answer_does_not_ask_for_a_second_conclusion() -> None:
+    """The answer of an earlier look arrives while the final one is at work."""
+    play = Play()
+    _until_look(play)
+    _wish(play, "stop", StopReason.STOPPED_BY_USER)
+    play.finish(2)
+    play.finish()
+    final = play.outstanding
+    assert isinstance(final, StartLook)
+    assert final.final
+    play.answer_look()
+    assert play.outstanding is final
+    assert play.machine.action is Action.LOOK
+    play.finish()
+    assert play.machine.ended

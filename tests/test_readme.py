@@ -25,7 +25,10 @@ def test_the_reader_in_ten_lines_plots_a_run(tmp_path: Path) -> None:
     assert len([line for line in code if not line.startswith("import")]) <= 10
     script = block.replace("RUN.h5", str(file))
     subprocess.run(
-        [sys.executable, "-c", script], cwd=tmp_path, check=True, env={"MPLBACKEND": "Agg", "HOME": str(tmp_path)}
+        [sys.executable, "-c", script],
+        cwd=tmp_path,
+        check=True,
+        env={"MPLBACKEND": "Agg", "HOME": str(tmp_path)},
     )
     picture = tmp_path / "run.png"
     assert picture.read_bytes().startswith(b"\x89PNG")
