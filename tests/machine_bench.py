@@ -219,6 +219,8 @@ class Play:
             self.answer_look()
         elif self.machine.paused:
             self.record(Kind.WISH, wish="resume", reason="", source="test")
+        else:
+            raise AssertionError(f"nothing is under way, and the machine waits for '{self.machine.action}'")
 
     def to_the_end(self, *, most: int = 4000) -> None:
         """Everything goes well from here on; the run must end."""
