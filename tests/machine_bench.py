@@ -54,6 +54,7 @@ class Play:
         self.outstanding: Effect | None = None
         self.letting_go = False
         self.looks_asked: list[StartLook] = []
+        self.looks_answered: set[int] = set()
         self.points_started: list[StartPoint] = []
         self.was_made_safe = False
         self.at_rest = False
@@ -80,12 +81,21 @@ class Play:
     def _hold(self, effect: Effect) -> None:
         """The invariants on what the machine starts."""
         match effect:
-            case EndDwell() | Halt():
-                assert isinstance(self.outstanding, (StartPoint, StartPrepare))
+            case EndDwell():
+                assert isinstance(self.outstanding, StartPoint)
+                assert self.machine.paused
+                assert not self.letting_go, "asked once a dwell"
                 self.letting_go = True
                 return
-            case StartLook(final=False):
+            case Halt():
+                assert isinstance(self.outstanding, (StartPoint, StartPrepare))
+                assert self.machine.stop is not None
+                self.letting_go = True
+                return
+            case StartLook(final=False, horizon=horizon):
                 assert self.machine.stop is None
+                assert horizon not in [look.horizon for look in self.looks_asked], "asked once a session"
+                assert horizon not in self.looks_answered, "an answer is not asked for again"
                 self.looks_asked.append(effect)
                 return
         assert self.outstanding is None, f"{effect} started while {self.outstanding} is outstanding"
@@ -179,7 +189,9 @@ class Play:
 
     def answer_look(self) -> None:
         request = self.looks_asked.pop(0)
-        look = {"goal_reached": len(self.machine.looks) + 1 >= self.settle_at_look}
+        number = len(self.machine.looks) + 1
+        look = {"goal_reached": number >= self.settle_at_look, "number": number}
+        self.looks_answered.add(request.horizon)
         self.record(Kind.LOOK, horizon=request.horizon, look=look)
 
     # ---- play -------------------------------------------------------------------------------------------
@@ -264,3 +276,24 @@ def state_of(machine: Machine) -> dict[str, Any]:
     for name in ("tally", "_swept", "_sweep"):
         state[name] = None if state[name] is None else state[name].snapshot()
     return state
+
+
+def measuring(points: int = 3) -> Play:
+    """A run that is prepared and has made so many points; the next one is under way."""
+    play = Play()
+    for _ in range(points + 1):
+        play.finish()
+    assert isinstance(play.outstanding, StartPoint)
+    return play
+
+
+def until_look(play: Play) -> StartLook:
+    """Go on until the next look is asked for."""
+    while not play.looks_asked:
+        play.finish()
+    return play.looks_asked[0]
+
+
+def wish(play: Play, wanted: str, reason: str = "") -> None:
+    """Somebody asks for "pause", "resume" or "stop"."""
+    play.record(Kind.WISH, wish=wanted, reason=reason, source="test")
