@@ -81,6 +81,8 @@ async def carry_run(
         machine=machine,
         hands=hands,
         looker=looker,
+        session=session,
+        reason=reason,
         conclude=lambda machine, look: conclusion(head, machine, look),
         clock=clock,
         observe=observe,
@@ -89,7 +91,7 @@ async def carry_run(
     snapshots = None if clock.is_virtual else asyncio.create_task(_snapshots(journal.path, out))
     stopper.attend(runner)
     try:
-        await runner.run(session=session, reason=reason)
+        await runner.run()
     finally:
         stopper.attend(None)
         if snapshots is not None:

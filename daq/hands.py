@@ -8,20 +8,25 @@ before an action is started, `end_dwell` and `halt` may come at any time while i
 from __future__ import annotations
 
 import asyncio
+import math
 from collections.abc import Awaitable
-from dataclasses import asdict, dataclass
-from typing import Any
+from dataclasses import asdict, dataclass, field
+from typing import Any, TypeVar
 
 from analysis.allocate import Visit
 from daq.records import Kind
 from drivers.clock import Clock
-from drivers.errors import DeviceError, Halted, HardwareFault, LinkError, OverLight
-from drivers.protocols import Ambient, Detector, Device, GratingDrive, Shutter
+from drivers.errors import DeviceError, Halted, HardwareFault, LinkError, OverLight, ReplyError
+from drivers.protocols import Ambient, Detector, Device, Gate, GratingDrive, Shutter
 
 HIGHEST_DEAD_TIME_FRACTION = 0.3
 """Counts times dead time over gate time: above it the correction is not trusted and the point is flagged
 (common practice)."""
 
+ABANDON_AFTER_S = 1.0
+"""A driver that overstays its own deadline by this much is no longer waited for."""
+
+Answer = TypeVar("Answer")
 Ending = tuple[str, dict[str, Any]]
 
 
@@ -63,6 +68,22 @@ class Grip:
     reply_timeout_s: float = 5.0
 
 
+@dataclass(slots=True)
+class _Dwell:
+    """The gates of one visit so far."""
+
+    counts: int = 0
+    gate_ns: int = 0
+    gates: int = 0
+    flags: set[str] = field(default_factory=set)
+
+    def add(self, gate: Gate) -> None:
+        self.counts += gate.counts
+        self.gate_ns += gate.gate_ns
+        self.gates += 1
+        self.flags.update(gate.flags)
+
+
 class Hands:
     """Move, settle, expose; and let go."""
 
@@ -75,6 +96,7 @@ class Hands:
         self._shutter_is_open: bool | None = None
         self._dwell_ends = False
         self._halted = False
+        self._owed: Exception | None = None
 
     def at_ns(self) -> int:
         """Nanoseconds since the session began."""
@@ -91,21 +113,23 @@ class Hands:
     async def halt(self) -> None:
         """Stop motion now; the point ends after the gate in progress."""
         self._dwell_ends = self._halted = True
-        await self._devices.drive.halt()
+        await self._ask("drive", self._devices.drive.halt(), self._grip.reply_timeout_s)
 
     async def prepare(self) -> Ending:
         """Shutter closed first, then who is there, then the drive's reference mark, then the air."""
-        self._position_steps = None
+        self._owed = self._position_steps = None  # preparing anew is the answer to what was owed
+        self._shutter_is_open = None
         wait_s = self._grip.reply_timeout_s
         try:
             await self._set_shutter(False)
             identities = {
-                role: asdict(await device.identify(deadline_s=wait_s))
+                role: asdict(await self._ask(role, device.identify(deadline_s=wait_s), wait_s))
                 for role, device in self._devices.by_role().items()
             }
             if self._halted:
                 return Kind.HALTED, {"at_ns": self.at_ns()}
-            homed = await self._devices.drive.home(deadline_s=self._grip.move_timeout_s)
+            wait_s = self._grip.move_timeout_s
+            homed = await self._ask("drive", self._devices.drive.home(deadline_s=wait_s), wait_s)
             self._position_steps = homed.steps
             ambient = await self._read_ambient()
         except Halted:
@@ -118,17 +142,31 @@ class Hands:
         }
 
     async def point(self, *, sweep: int, index: int, visit: Visit) -> Ending:
-        """One visit. What was counted in whole gates before an interruption is kept as a shorter point."""
+        """One visit. Whole gates counted before an interruption or an error are kept as a shorter point; an
+        error that came after them is owed, and raised by the next action."""
+        if self._owed is not None:
+            owed, self._owed = self._owed, None
+            raise owed
         started_ns = self.at_ns()
+        dwell = _Dwell()
+        ambient = None
         try:
             reported_steps = await self._go_to(visit.steps)
-            await self._set_shutter(visit.light)
-            counts, gate_ns, gates, flags = await self._dwell(visit)
+            if not self._dwell_ends:
+                await self._set_shutter(visit.light)
+                await self._expose(visit, dwell)
+                if not visit.light:
+                    ambient = await self._read_ambient()
+            if self._dwell_ends:
+                await self._set_shutter(False)
         except Halted:
-            return self._let_go()
-        if self._dwell_ends:
-            await self._set_shutter(False)
-        if gates == 0:
+            if dwell.gates == 0:
+                return self._let_go()
+        except Exception as error:
+            if dwell.gates == 0:
+                raise
+            self._owed = error
+        if dwell.gates == 0:
             return Kind.HALTED, {"at_ns": self.at_ns()}
         body: dict[str, Any] = {
             "at_ns": started_ns,
@@ -139,19 +177,22 @@ class Hands:
             "light": visit.light,
             "steps": visit.steps,
             "reported_steps": reported_steps,
-            "counts": counts,
-            "gate_ns": gate_ns,
-            "gates": gates,
-            "flags": sorted(flags),
-            "complete": gate_ns >= visit.dwell_ns,
+            "counts": dwell.counts,
+            "gate_ns": dwell.gate_ns,
+            "gates": dwell.gates,
+            "flags": sorted(dwell.flags),
+            "complete": dwell.gate_ns >= visit.dwell_ns,
         }
-        if not visit.light and self._devices.ambient is not None:
-            body["ambient"] = await self._read_ambient()
+        if ambient is not None:
+            body["ambient"] = ambient
         return Kind.POINT, body
 
     async def safe(self) -> Ending:
         """Shutter closed and motion stopped, whatever else fails. Never raises: problems are reported."""
         problems: list[str] = []
+        if self._owed is not None:
+            problems.append(str(self._owed))
+            self._owed = None
         # The shutter first: light harms more than motion. Its remembered state is not trusted here.
         shutter = self._devices.shutter.set_open(False, deadline_s=self._grip.reply_timeout_s)
         closed = await self._attempt("shutter", shutter, problems)
@@ -180,41 +221,53 @@ class Hands:
             raise HardwareFault("drive", "it halted by itself; look for a limit switch or a stop button")
         return Kind.HALTED, {"at_ns": self.at_ns()}
 
+    async def _ask(self, role: str, call: Awaitable[Answer], deadline_s: float) -> Answer:
+        """What a driver answers. It keeps its own deadline; one that does not is abandoned a little later."""
+        try:
+            async with asyncio.timeout(deadline_s + ABANDON_AFTER_S):
+                return await call
+        except TimeoutError:
+            raise LinkError(
+                role, f"no answer within {deadline_s:g} s, and the driver did not say so"
+            ) from None
+
     async def _go_to(self, steps: int) -> int:
         """Arrive from below: a worm's slack is then always taken up on the same side."""
         here = self._position_steps
         if here == steps:
             return steps
         self._position_steps = None  # unknown until the drive has answered
-        wait_s = self._grip.move_timeout_s
         if (here is None or steps < here) and self._grip.backlash_steps > 0:
-            below = max(steps - self._grip.backlash_steps, self._grip.lowest_steps)
-            await self._devices.drive.move_to(below, deadline_s=wait_s)
-        moved = await self._devices.drive.move_to(steps, deadline_s=wait_s)
-        if moved.steps != steps:
-            raise HardwareFault("drive", f"asked to go to {steps} steps, it reports {moved.steps}")
-        self._position_steps = moved.steps
+            await self._move_to(max(steps - self._grip.backlash_steps, self._grip.lowest_steps))
+        reported_steps = await self._move_to(steps)
+        if reported_steps != steps:
+            raise HardwareFault("drive", f"asked to go to {steps} steps, it reports {reported_steps}")
+        self._position_steps = reported_steps
         await asyncio.sleep(self._grip.settle_ns * 1e-9)
+        return reported_steps
+
+    async def _move_to(self, steps: int) -> int:
+        if self._halted:
+            raise Halted("drive", "a halt was asked for between two moves")
+        wait_s = self._grip.move_timeout_s
+        moved = await self._ask("drive", self._devices.drive.move_to(steps, deadline_s=wait_s), wait_s)
         return moved.steps
 
-    async def _dwell(self, visit: Visit) -> tuple[int, int, int, set[str]]:
-        counts = gate_ns = gates = 0
-        flags: set[str] = set()
-        while gate_ns < visit.dwell_ns and not self._dwell_ends:
-            asked_ns = min(self._grip.longest_gate_ns, visit.dwell_ns - gate_ns)
-            gate = await self._devices.detector.gate(
-                asked_ns, deadline_s=asked_ns * 1e-9 + self._grip.reply_timeout_s
+    async def _expose(self, visit: Visit, dwell: _Dwell) -> None:
+        while dwell.gate_ns < visit.dwell_ns and not self._dwell_ends:
+            asked_ns = min(self._grip.longest_gate_ns, visit.dwell_ns - dwell.gate_ns)
+            wait_s = asked_ns * 1e-9 + self._grip.reply_timeout_s
+            gate = await self._ask(
+                "detector", self._devices.detector.gate(asked_ns, deadline_s=wait_s), wait_s
             )
-            if gate.gate_ns <= 0:
-                raise LinkError("detector", f"it reports a gate of {gate.gate_ns} ns")
-            counts += gate.counts
-            gate_ns += gate.gate_ns
-            gates += 1
-            flags.update(gate.flags)
+            if gate.gate_ns <= 0 or gate.counts < 0:
+                raise ReplyError(
+                    "detector", f"it reports {gate.counts} counts in a gate of {gate.gate_ns} ns"
+                )
+            dwell.add(gate)
             if gate.counts * self._grip.dead_time_ns > HIGHEST_DEAD_TIME_FRACTION * gate.gate_ns:
-                flags.add("dead-time")
+                dwell.flags.add("dead-time")
             await self._guard_light(gate.counts / (gate.gate_ns * 1e-9))
-        return counts, gate_ns, gates, flags
 
     async def _guard_light(self, rate_per_s: float) -> None:
         if rate_per_s > self._grip.highest_rate_per_s:
@@ -228,10 +281,15 @@ class Hands:
     async def _set_shutter(self, is_open: bool) -> None:
         if self._shutter_is_open is not is_open:
             self._shutter_is_open = None
-            await self._devices.shutter.set_open(is_open, deadline_s=self._grip.reply_timeout_s)
+            wait_s = self._grip.reply_timeout_s
+            await self._ask("shutter", self._devices.shutter.set_open(is_open, deadline_s=wait_s), wait_s)
             self._shutter_is_open = is_open
 
     async def _read_ambient(self) -> dict[str, float] | None:
         if self._devices.ambient is None:
             return None
-        return asdict(await self._devices.ambient.read(deadline_s=self._grip.reply_timeout_s))
+        wait_s = self._grip.reply_timeout_s
+        reading = asdict(await self._ask("ambient", self._devices.ambient.read(deadline_s=wait_s), wait_s))
+        if not all(math.isfinite(value) for value in reading.values()):
+            raise ReplyError("ambient", f"it reports {reading}")
+        return reading

@@ -25,6 +25,7 @@ from daq.tally import Snapshot
 from drivers.errors import GratingdError
 
 LARGEST_LINE_BYTES = 1 << 26
+LONGEST_LOOK_S = 120.0
 
 
 class LookError(GratingdError):
@@ -129,9 +130,10 @@ class ProcessLooker:
             assert worker.stdin is not None
             assert worker.stdout is not None
             worker.stdin.write(line)
-            await worker.stdin.drain()
-            reply = await worker.stdout.readline()
-        except OSError:
+            async with asyncio.timeout(LONGEST_LOOK_S):
+                await worker.stdin.drain()
+                reply = await worker.stdout.readline()
+        except OSError:  # TimeoutError is one: a worker that hangs is as good as dead
             reply = b""
         if not reply.endswith(b"\n"):
             await self.close()

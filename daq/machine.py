@@ -8,9 +8,10 @@ in journal order, so a run is resumed by folding the same `step` over its journa
     nothing    a wish (only while paused)
     prepare    devices identified, homed, dark safe  prepared, halted, fault
     point      one dwell at one position             point, halted, fault
-    look       an answer of the analysis             look, conclusion, fault
+    look       an answer of the analysis             look
     halt       the hands to let go                   point, halted, prepared, fault
     safe       shutter closed, motion stopped        safe, fault
+    conclude   the final look and what follows of it conclusion
 
 Invariants (tests/test_machine.py holds them over random sequences):
 - at most one action is outstanding, and every effect that starts one follows a moment with none;
@@ -39,6 +40,9 @@ measures on, and the same in every replay however fast the computer is."""
 LOOK_RATIO = 1.2
 """Looks are geometric in the collected light."""
 
+SHORTEST_DWELL_NS = 1_000_000
+"""A rest of a dwell or of the light shorter than this is not worth a gate, and real counters refuse it."""
+
 FAULTS_IN_A_ROW = 3
 """A repeatable fault is repaired by preparing anew, this many times without a good point between."""
 
@@ -54,6 +58,7 @@ class Action(StrEnum):
     LOOK = "look"
     HALT = "halt"
     SAFE = "safe"
+    CONCLUDE = "conclude"
 
 
 _ALWAYS = frozenset(Action)
@@ -68,7 +73,7 @@ LEGAL: dict[str, frozenset[Action]] = {
     Kind.POINT: frozenset({Action.POINT, Action.HALT}),
     Kind.HALTED: frozenset({Action.POINT, Action.HALT}),
     Kind.SAFE: frozenset({Action.SAFE}),
-    Kind.CONCLUSION: frozenset({Action.LOOK}),
+    Kind.CONCLUSION: frozenset({Action.CONCLUDE}),
 }
 
 
@@ -157,7 +162,6 @@ class Machine:
         self._resting = False
         self._made_safe = False
         self._dwell_ending = False
-        self._final_asked = False
         self._faults_in_a_row = 0
         self._visits: tuple[Visit, ...] = next_sweep(self.window, number=0)
         self._cursor = 0
@@ -192,7 +196,7 @@ class Machine:
         self._session_base_ns = self.bench_ns
         self._devices = body["devices"]
         self._prepared = self._resting = self._made_safe = False
-        self._dwell_ending = self._final_asked = False
+        self._dwell_ending = False
         if self._pending is not None:
             self._pending.asked = False
         self._faults_in_a_row = 0
@@ -209,16 +213,16 @@ class Machine:
     def _point_record(self, body: Body) -> None:
         self.action = Action.NOTHING
         self._dwell_ending = False
-        self._faults_in_a_row = 0
         self.points += 1
         if body["light"]:
             self.light_ns += body["gate_ns"]
         if body["flags"]:
             self._sweep = None  # a sweep with a gap in it says nothing about the comb as a whole
         else:
+            self._faults_in_a_row = 0
             self._count(body)
         self._counted_ns += body["gate_ns"]
-        if self._counted_ns >= self._visits[self._cursor].dwell_ns:
+        if self._counted_ns > self._visits[self._cursor].dwell_ns - SHORTEST_DWELL_NS:
             self._next_visit()
 
     def _count(self, body: Body) -> None:
@@ -255,7 +259,7 @@ class Machine:
         if pending is None or pending.request.horizon != body["horizon"] or pending.answer is not None:
             return  # asked for twice around a restart: the first answer stands
         pending.answer = body["look"]
-        if self.action is Action.LOOK and not self._final_asked:
+        if self.action is Action.LOOK:
             self.action = Action.NOTHING
 
     def _fault_record(self, body: Body) -> None:
@@ -309,7 +313,7 @@ class Machine:
             yield from self._measure()
 
     def _interrupt(self) -> Iterable[Effect]:
-        if self.action is Action.LOOK and not self._final_asked and (self.paused or self.stop is not None):
+        if self.action is Action.LOOK and (self.paused or self.stop is not None):
             self.action = Action.NOTHING  # nobody waits any more; the answer is taken when it comes
         elif self.stop is not None:
             if self.action in (Action.PREPARE, Action.POINT):
@@ -328,8 +332,7 @@ class Machine:
     def _wind_up(self) -> Effect:
         if self._devices and not self._made_safe:
             return self._begin(Action.SAFE, StartSafe())
-        self._final_asked = True
-        return self._begin(Action.LOOK, self.look_request(final=True))
+        return self._begin(Action.CONCLUDE, self.look_request(final=True))
 
     def _measure(self) -> Iterable[Effect]:
         if self._pending is None and self._sweep_is_over():
@@ -397,7 +400,7 @@ class Machine:
         if self.bench_ns >= self.time_limit_ns:
             self._stop_for(StopReason.TIME_LIMIT)
         left_ns = self._light_left_ns()
-        if left_ns is not None and left_ns <= 0:
+        if left_ns is not None and left_ns < SHORTEST_DWELL_NS:
             self._stop_for(StopReason.LIGHT_LIMIT)
 
 

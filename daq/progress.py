@@ -181,6 +181,7 @@ def doing(machine: Machine) -> str:
         "look": "weighing the evidence",
         "halt": "stopping",
         "safe": "closing the shutter",
+        "conclude": "weighing everything",
     }
     return words[machine.action]
 

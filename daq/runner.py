@@ -11,8 +11,9 @@ from __future__ import annotations
 import asyncio
 import logging
 import traceback
-from collections.abc import Callable, Coroutine
+from collections.abc import Awaitable, Callable
 from dataclasses import dataclass
+from functools import partial
 from typing import Any
 
 from daq.hands import Ending, Hands
@@ -24,13 +25,12 @@ from daq.machine import (
     EndDwell,
     Halt,
     Machine,
-    MachineError,
     StartLook,
     StartPoint,
     StartPrepare,
     StartSafe,
 )
-from daq.records import Body, Kind
+from daq.records import Body, Kind, StopReason
 from drivers.clock import Clock
 from drivers.errors import DeviceError, GratingdError
 
@@ -64,6 +64,8 @@ class Runner:
         machine: Machine,
         hands: Hands | None,
         looker: Looker,
+        session: int,
+        reason: str,
         conclude: Conclude,
         clock: Clock,
         observe: Callable[[Notice], None] = lambda notice: None,
@@ -79,6 +81,14 @@ class Runner:
         self._inbox: asyncio.Queue[Ending] = asyncio.Queue()
         self._outbox: asyncio.Queue[Notice | None] = asyncio.Queue()
         self._tasks: asyncio.TaskGroup
+        # The session opens before anybody can wish for anything.
+        opening = {
+            "number": session,
+            "reason": reason,
+            "utc_ns": clock.utc_ns(),
+            "devices": hands is not None,
+        }
+        self.post(Kind.SESSION, opening)
 
     def at_ns(self) -> int:
         """Nanoseconds since this session began."""
@@ -89,20 +99,15 @@ class Runner:
         self._inbox.put_nowait((kind, body))
 
     def wish(self, wish: str, *, reason: str = "", source: str) -> None:
-        """Ask for "pause", "resume" or "stop" (a stop names its StopReason)."""
+        """Ask for "pause", "resume" or "stop" (a stop names its StopReason). ValueError for anything else."""
+        if wish not in ("pause", "resume", "stop"):
+            raise ValueError(f"wish = {wish!r}; allowed: 'pause', 'resume', 'stop'")
+        if wish == "stop":
+            reason = StopReason(reason)
         self.post(Kind.WISH, {"at_ns": self.at_ns(), "wish": wish, "reason": reason, "source": source})
 
-    async def run(self, *, session: int, reason: str) -> None:
+    async def run(self) -> None:
         """Until the run has ended. Raises RunFailed if it could not be concluded; the bench is safe then."""
-        self.post(
-            Kind.SESSION,
-            {
-                "number": session,
-                "reason": reason,
-                "utc_ns": self._clock.utc_ns(),
-                "devices": self._hands is not None,
-            },
-        )
         try:
             async with asyncio.TaskGroup() as self._tasks:
                 publisher = self._tasks.create_task(self._publish())
@@ -118,7 +123,7 @@ class Runner:
             await self._rescue()
             first = failures.exceptions[0]
             raise RunFailed(f"the run broke off: {first}") from failures
-        except asyncio.CancelledError:
+        except BaseException:  # cancelled, or SystemExit out of a task: the bench is made safe all the same
             await self._rescue()
             raise
 
@@ -126,11 +131,12 @@ class Runner:
         while not self._machine.ended:
             kind, body = await self._inbox.get()
             try:
-                self._machine.admit(kind)
-            except MachineError as error:
+                effects = self._machine.step(kind, body)
+            except Exception as error:  # not journalled: a record that cannot be folded would poison the run
                 kind, body = Kind.FAULT, self._fault("machine", error)
+                effects = self._machine.step(kind, body)
             seq = self._journal.append(kind, body)
-            for effect in self._machine.step(kind, body):
+            for effect in effects:
                 self._start(effect)
             notice = Notice(seq, kind, body, self._machine)
             if self._clock.is_virtual:
@@ -168,24 +174,24 @@ class Runner:
         match effect:
             case StartPoint(sweep, index, visit):
                 self._hands.arm()
-                self._act(Action.POINT, self._hands.point(sweep=sweep, index=index, visit=visit))
+                self._act(Action.POINT, partial(self._hands.point, sweep=sweep, index=index, visit=visit))
             case StartPrepare():
                 self._hands.arm()
-                self._act(Action.PREPARE, self._hands.prepare())
+                self._act(Action.PREPARE, self._hands.prepare)
             case StartSafe():
                 self._hands.arm()
-                self._act(Action.SAFE, self._hands.safe())
+                self._act(Action.SAFE, self._hands.safe)
             case EndDwell():
                 self._hands.end_dwell()
             case Halt():
                 self._tasks.create_task(self._halt())
 
-    def _act(self, action: Action, call: Coroutine[Any, Any, Ending]) -> None:
+    def _act(self, action: Action, call: Callable[[], Awaitable[Ending]]) -> None:
         self._tasks.create_task(self._carry_out(action, call))
 
-    async def _carry_out(self, action: Action, call: Coroutine[Any, Any, Ending]) -> None:
+    async def _carry_out(self, action: Action, call: Callable[[], Awaitable[Ending]]) -> None:
         try:
-            kind, body = await call
+            kind, body = await call()
         except Exception as error:
             kind, body = Kind.FAULT, self._fault(action, error)
         self.post(kind, body)
@@ -210,7 +216,12 @@ class Runner:
             self.post(Kind.LOOK, {"at_ns": self.at_ns(), "horizon": request.horizon, "look": look})
 
     def _concluded(self, look: dict[str, Any] | None) -> dict[str, Any]:
-        return {"at_ns": self.at_ns()} | self._conclude(self._machine, look)
+        try:
+            conclusion = self._conclude(self._machine, look)
+        except Exception as error:
+            self.post(Kind.FAULT, self._fault("conclude", error))
+            conclusion = self._conclude(self._machine, None)
+        return {"at_ns": self.at_ns()} | conclusion
 
     def _fault(self, action: str, error: Exception) -> dict[str, Any]:
         body = {"at_ns": self.at_ns(), "action": str(action)}

@@ -69,7 +69,10 @@ class Appointments(Stopper):
         if runner is not None:
             loop = asyncio.get_running_loop()
             for at_s, call in self._appointed:
-                loop.call_later(at_s, call, runner)
+                if at_s <= 0.0:
+                    call(runner)
+                else:
+                    loop.call_later(at_s, call, runner)
 
 
 def bench_file(folder: Path, *, faults: str = "", changes: Sequence[tuple[str, str]] = ()) -> LoadedBench:

@@ -260,7 +260,7 @@ def _action_of(play: Play) -> Action:
         case StartSafe():
             return Action.SAFE
         case _:
-            return Action.LOOK
+            return Action.CONCLUDE
 
 
 def replay(the_plan: dict[str, Any], journal: Sequence[tuple[str, dict[str, Any]]]) -> Machine:

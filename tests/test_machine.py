@@ -198,7 +198,7 @@ def test_recovery_without_devices_touches_none() -> None:
     play = measuring()
     started = len(play.points_started)
     play.session(devices=False)
-    assert play.machine.action is Action.LOOK
+    assert play.machine.action is Action.CONCLUDE
     play.to_the_end()
     assert play.machine.stop is StopReason.INTERRUPTED
     assert len(play.points_started) == started
@@ -216,7 +216,15 @@ def test_an_unexpected_fault_elsewhere_halts_the_point() -> None:
 
 def test_the_words_of_the_actions_stand_in_journals_and_do_not_change() -> None:
     """Fault records carry them, and people read them on the screen."""
-    assert [str(action) for action in Action] == ["nothing", "prepare", "point", "look", "halt", "safe"]
+    assert [str(action) for action in Action] == [
+        "nothing",
+        "prepare",
+        "point",
+        "look",
+        "halt",
+        "safe",
+        "conclude",
+    ]
 
 
 def test_a_machine_before_its_first_session_has_done_nothing() -> None:

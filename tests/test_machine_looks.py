@@ -201,7 +201,7 @@ def test_a_late_answer_does_not_ask_for_a_second_conclusion() -> None:
     assert final.final
     play.answer_look()
     assert play.outstanding is final
-    assert play.machine.action is Action.LOOK
+    assert play.machine.action is Action.CONCLUDE
     play.finish()
     assert play.machine.ended
 
