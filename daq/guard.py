@@ -53,15 +53,3 @@ def check() -> None:
         file=sys.stderr,
     )
     raise SystemExit(REFUSED)
-
-
-def main() -> None:
-    """The console script `gratingd`."""
-    check()
-    from daq.cli import main as command_line
-
-    command_line()
-
-
-if __name__ == "__main__":
-    main()

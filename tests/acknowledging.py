@@ -1,6 +1,6 @@
 """A child process that measures in real time and writes the number of every acknowledged record to a pipe.
 
-    python tests/acknowledging.py BENCH TARGET FOLDER
+python tests/acknowledging.py BENCH TARGET FOLDER
 """
 
 from __future__ import annotations

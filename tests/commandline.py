@@ -10,7 +10,7 @@ from pathlib import Path
 from typing import Any
 
 ROOT = Path(__file__).resolve().parents[1]
-PROGRAM = (sys.executable, "-P", "-m", "daq.guard")
+PROGRAM = (sys.executable, "-P", "-m", "daq")
 
 
 def surroundings(more: Mapping[str, str] | None = None) -> dict[str, str]:

@@ -15,12 +15,13 @@ import click
 import h5py
 import pytest
 from cellar import QUICK_TARGET, bench_file, fault, target_file
+from cellar import run as run_once
 from click.testing import CliRunner
 from commandline import ROOT, complaint, gratingd, start, surroundings
 
 from daq.cli import Exit
 from daq.cli import gratingd as commands
-from daq.records import StopReason
+from daq.records import Kind, StopReason
 from daq.runfile import read_run
 
 KEYS = {
@@ -327,6 +328,19 @@ def test_a_night_goes_on_when_nobody_reads_its_progress_any_more(tmp_path: Path)
     assert "light-limit" in done.stdout
 
 
+def test_a_display_that_fails_at_every_record_is_asked_once(tmp_path: Path) -> None:
+    """Each failure is a record, and a record is shown: asked again it would fail for ever."""
+
+    def broken(notice: object) -> None:
+        raise ValueError("no room on the screen")
+
+    outcome = run_once(tmp_path, observe=broken)
+    (told,) = outcome.of_kind(Kind.FAULT)
+    assert "no room on the screen" in told["text"]
+    assert outcome.summary["stop_reason"] == "internal-error"
+    assert not outcome.world.shutter.is_open
+
+
 # ---- help -----------------------------------------------------------------------------------------------
 
 
@@ -363,8 +377,8 @@ def test_the_version_is_that_of_the_package() -> None:
 def test_help_and_mistakes_in_options_import_nothing_heavy(tmp_path: Path) -> None:
     """Not how long it takes, which is the machine's affair, but what it is spent on."""
     code = (
-        "import sys; from daq import guard; sys.argv = ['gratingd', *sys.argv[1:]]\n"
-        "try: guard.main()\n"
+        "import sys; from daq import __main__ as program; sys.argv = ['gratingd', *sys.argv[1:]]\n"
+        "try: program.main()\n"
         "except SystemExit: pass\n"
         "heavy = {'numpy', 'scipy', 'h5py', 'pydantic', 'rich', 'sqlite3', 'asyncio'}\n"
         "print(sorted(heavy & set(sys.modules)), file=sys.stderr)"

@@ -1,4 +1,4 @@
-"""The same seed is the same night, byte for byte, whatever Python's hashes; a look is the same wherever it runs."""
+"""The same seed is the same night, byte for byte; a look is the same wherever it is computed."""
 
 from __future__ import annotations
 

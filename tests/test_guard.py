@@ -48,7 +48,7 @@ def test_our_own_packages_pass(tmp_path: Path) -> None:
 
 def test_a_module_in_the_working_folder(tmp_path: Path) -> None:
     (tmp_path / "analysis.py").write_text("raise RuntimeError('never imported')\n")
-    refused(child("-m", "daq.guard", cwd=tmp_path, path=[ROOT]), "analysis", tmp_path / "analysis.py")
+    refused(child("-m", "daq", cwd=tmp_path, path=[ROOT]), "analysis", tmp_path / "analysis.py")
 
 
 def test_without_the_working_folder_on_the_path_the_same_module_does_no_harm(tmp_path: Path) -> None:

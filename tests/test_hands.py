@@ -96,7 +96,7 @@ LONG_DWELLS = QUICK_TARGET.replace("dwell_s = 0.5", "dwell_s = 3.4").replace("40
 
 
 def test_gates_counted_before_a_fault_are_kept(tmp_path: Path) -> None:
-    """The fifth gate of a dark of 13.6 s and the third of a light of 3.4 s fail: the gates before them count."""
+    """The fifth gate of a dark of 13.6 s and a later one of a light of 3.4 s fail: those before them count."""
     bench = bench_file(
         tmp_path, faults=fault("detector", "gate", 5, "link") + fault("detector", "gate", 17, "link")
     )

@@ -81,7 +81,7 @@ def test_kill_at_random_moments_loses_nothing_acknowledged(tmp_path: Path) -> No
         assert set(acknowledged) <= {record.seq for record in before}, told
 
         resume = number % 3 == 0
-        command = [sys.executable, "-P", "-m", "daq.guard", "recover", str(folder / "runs"), "--json"]
+        command = [sys.executable, "-P", "-m", "daq", "recover", str(folder / "runs"), "--json"]
         done = subprocess.run(command + ["--resume"] * resume, capture_output=True, text=True, check=False)
         assert done.returncode == 0, f"{told}: {done.stderr}"
         (run,) = json.loads(done.stdout)["runs"]
