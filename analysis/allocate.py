@@ -15,6 +15,10 @@ from functools import lru_cache
 from typing import Any
 
 
+SHORTEST_DWELL_NS = 1_000_000
+"""A rest of a dwell or of the light shorter than this is not worth a gate, and real counters refuse it."""
+
+
 @dataclass(frozen=True, slots=True)
 class Visit:
     """One dwell: at `steps` for `dwell_ns`, shutter open if `light`; `group` is the comb it belongs to."""

@@ -7,7 +7,8 @@ import contextlib
 import json
 import logging
 import sys
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
@@ -34,8 +35,24 @@ class ExportFailed(GratingdError):
     """The journal is whole, but its file could not be made."""
 
 
+@dataclass(slots=True)
+class Outcome:
+    """What came of a night or a recovery: a summary a finished run, and what to say of the others."""
+
+    runs: list[dict[str, Any]] = field(default_factory=list)
+    problems: list[str] = field(default_factory=list)
+    not_started: list[str] = field(default_factory=list)
+    stopped: StopReason | None = None
+
+
+def left_unsafe(summary: Mapping[str, Any]) -> bool:
+    """Whether the bench could not be seen to be safe at the end of a run that used it."""
+    safe = summary.get("safe")
+    return safe is not None and (safe["shutter"], safe["drive"]) != ("closed", "stopped")
+
+
 class Stopper:
-    """Where a stop is asked for, by Ctrl-C, a signal or a timer; it reaches run and night."""
+    """Where a stop is asked for, by Ctrl-C, a signal or a timer; it reaches the run."""
 
     def __init__(self) -> None:
         self.reason: StopReason | None = None

@@ -5,7 +5,7 @@ from __future__ import annotations
 import contextlib
 import json
 import sys
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Awaitable, Callable, Iterator, Mapping, Sequence
 from enum import IntEnum
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, NoReturn
@@ -17,7 +17,7 @@ from drivers.errors import DataError, DeviceError, GratingdError, SettingsError
 if TYPE_CHECKING:
     from asyncio import AbstractEventLoop
 
-    from daq.carry import Stopper
+    from daq.carry import Outcome, Stopper
     from daq.night import NightOrder
     from daq.progress import Progress
     from drivers.clock import Clock
@@ -31,7 +31,7 @@ class Exit(IntEnum):
 
     DONE = 0
     MISTAKE = 2  # a command, a settings file or a data file; nothing was moved or written
-    BENCH_FAULT = 3  # a run was stopped safely because of a device
+    BENCH_FAULT = 3  # a run was stopped because of a device, or the bench may not be safe
     BROKE_OFF = 4  # an internal error, or a journal or file that could not be written or read
     STOPPED = 5  # somebody stopped it before it was done
 
@@ -40,7 +40,7 @@ EXIT_CODES = """\b
 Exit codes:
   0  everything asked for was done (a limit reached is done too)
   2  a mistake in a command, a settings file or a data file
-  3  a run was stopped safely because of a fault of the bench
+  3  a run was stopped because of a fault of the bench, or the bench may not be safe
   4  an internal error, or a journal or file that could not be written or read
   5  stopped by somebody before it was done (Ctrl-C, SIGTERM, a terminal closed)
 """
@@ -198,10 +198,9 @@ def recover(folder: Path, resume: bool, as_json: bool) -> None:
     from daq.recover import recover as recover_folder
 
     progress = _progress(live=resume, as_json=as_json)
-    problems: list[str] = []
 
-    async def work(clock: Clock, stopper: Stopper) -> list[dict[str, Any]]:
-        done = await recover_folder(
+    async def work(clock: Clock, stopper: Stopper) -> Outcome:
+        return await recover_folder(
             folder,
             clock,
             resume=resume,
@@ -209,14 +208,12 @@ def recover(folder: Path, resume: bool, as_json: bool) -> None:
             on_run=progress.begin,
             stopper=stopper,
         )
-        problems.extend(done.problems)
-        return done.runs
 
-    runs = _with_signals(work, progress, start_utc_ns=None)
-    if not runs and not problems and not as_json:
+    outcome = _with_signals(work, progress, start_utc_ns=None)
+    if not outcome.runs and not outcome.problems and not as_json:
         click.echo(f"nothing to recover in {folder}")
         return
-    _finish(runs, as_json, problems)
+    _finish(outcome, as_json)
 
 
 # ---- parts ----------------------------------------------------------------------------------------------
@@ -243,7 +240,7 @@ def _carry_out(order: NightOrder, *, virtual: bool, live: bool, as_json: bool) -
 
     progress = _progress(live=live, as_json=as_json)
 
-    async def work(clock: Clock, stopper: Stopper) -> list[dict[str, Any]]:
+    async def work(clock: Clock, stopper: Stopper) -> Outcome:
         return await run_night(order, clock, observe=progress.observe, on_run=progress.begin, stopper=stopper)
 
     start_utc_ns = order.bench.bench.time.start_utc_ns if virtual else None
@@ -251,8 +248,8 @@ def _carry_out(order: NightOrder, *, virtual: bool, live: bool, as_json: bool) -
 
 
 def _with_signals(
-    work: Callable[[Clock, Stopper], Any], progress: Progress, *, start_utc_ns: int | None
-) -> list[dict[str, Any]]:
+    work: Callable[[Clock, Stopper], Awaitable[Outcome]], progress: Progress, *, start_utc_ns: int | None
+) -> Outcome:
     """Run under real or virtual time; a signal asks for a clean stop. Known errors exit."""
     import asyncio
 
@@ -261,10 +258,9 @@ def _with_signals(
 
     stopper = Stopper()
 
-    async def attended(clock: Clock) -> list[dict[str, Any]]:
+    async def attended(clock: Clock) -> Outcome:
         with _signals(asyncio.get_running_loop(), stopper, clock):
-            result: list[dict[str, Any]] = await work(clock, stopper)
-            return result
+            return await work(clock, stopper)
 
     try:
         return run_real(attended) if start_utc_ns is None else run_virtual(attended, start_utc_ns)
@@ -320,24 +316,42 @@ def _progress(*, live: bool, as_json: bool) -> Progress:
     return Lines(status_lines=live)
 
 
-def _finish(runs: list[dict[str, Any]], as_json: bool, problems: Sequence[str] = ()) -> None:
-    """Print what came out, and end with the code that says how it went."""
-    _print_runs(runs, as_json)
-    reasons = {run["stop_reason"] for run in runs}
-    problems = [*problems, *(run["problem"] for run in runs if "problem" in run)]
+def _finish(outcome: Outcome, as_json: bool) -> None:
+    """Print what came out, worst news last, and end with the code that says how it went."""
+    from daq.carry import left_unsafe
+
+    more = {"not_started": outcome.not_started, "problems": outcome.problems}
+    _print_runs(outcome.runs, as_json, more)
+    if outcome.not_started:
+        click.echo(f"gratingd: not started: {', '.join(outcome.not_started)}", err=True)
+    problems = [*outcome.problems, *(run["problem"] for run in outcome.runs if "problem" in run)]
     for problem in problems:
         click.echo(f"gratingd: {problem}", err=True)
-    if problems or "internal-error" in reasons:
-        sys.exit(Exit.BROKE_OFF)
-    if reasons & {"fault", "over-light"}:
-        sys.exit(Exit.BENCH_FAULT)
-    if "stopped-by-user" in reasons:
-        sys.exit(Exit.STOPPED)
+    unsafe = [run for run in outcome.runs if left_unsafe(run)]
+    for run in unsafe:
+        safe = run["safe"]
+        click.echo(
+            f"gratingd: GO AND LOOK AT THE BENCH: after '{run['target']}' the shutter is {safe['shutter']}, "
+            f"the drive {safe['drive']}: {'; '.join(safe['problems'])}",
+            err=True,
+        )
+    sys.exit(_exit_code(outcome, bool(problems), bool(unsafe)))
 
 
-def _print_runs(runs: list[dict[str, Any]], as_json: bool) -> None:
+def _exit_code(outcome: Outcome, has_problems: bool, is_unsafe: bool) -> Exit:
+    reasons = {run["stop_reason"] for run in outcome.runs}
+    if has_problems or "internal-error" in reasons:
+        return Exit.BROKE_OFF
+    if is_unsafe or reasons & {"fault", "over-light"}:
+        return Exit.BENCH_FAULT
+    if "stopped-by-user" in reasons or outcome.stopped == "stopped-by-user":
+        return Exit.STOPPED
+    return Exit.DONE
+
+
+def _print_runs(runs: list[dict[str, Any]], as_json: bool, more: Mapping[str, Any] | None = None) -> None:
     if as_json:
-        click.echo(json.dumps({"runs": runs}, indent=2, allow_nan=False))
+        click.echo(json.dumps({"runs": runs, **(more or {})}, indent=2, allow_nan=False))
         return
     if not runs:
         return

@@ -8,16 +8,20 @@ before an action is started, `end_dwell` and `halt` may come at any time while i
 from __future__ import annotations
 
 import asyncio
+import logging
 import math
-from collections.abc import Awaitable
+import operator
+from collections.abc import Awaitable, Callable, Iterable, Mapping
 from dataclasses import asdict, dataclass, field
 from typing import Any, TypeVar
 
-from analysis.allocate import Visit
+from analysis.allocate import SHORTEST_DWELL_NS, Visit
 from daq.records import Kind
 from drivers.clock import Clock
 from drivers.errors import DeviceError, Halted, HardwareFault, LinkError, OverLight, ReplyError
-from drivers.protocols import Ambient, Detector, Device, Gate, GratingDrive, Shutter
+from drivers.protocols import Ambient, Detector, Device, GratingDrive, Shutter
+
+log = logging.getLogger(__name__)
 
 HIGHEST_DEAD_TIME_FRACTION = 0.3
 """Counts times dead time over gate time: above it the correction is not trusted and the point is flagged
@@ -45,13 +49,19 @@ class Devices:
 
     async def close(self) -> list[str]:
         """Release every link; what went wrong is returned, never raised."""
-        problems = []
-        for role, device in self.by_role().items():
-            try:
+        return await close_devices(self.by_role())
+
+
+async def close_devices(devices: Mapping[str, Device]) -> list[str]:
+    """Release what was opened, by role; what went wrong is returned, never raised."""
+    problems = []
+    for role, device in devices.items():
+        try:
+            async with asyncio.timeout(ABANDON_AFTER_S):
                 await device.close()
-            except Exception as error:
-                problems.append(f"{role}: {error}")
-        return problems
+        except Exception as error:
+            problems.append(f"{role}: {error!r}")
+    return problems
 
 
 @dataclass(frozen=True, slots=True)
@@ -77,11 +87,19 @@ class _Dwell:
     gates: int = 0
     flags: set[str] = field(default_factory=set)
 
-    def add(self, gate: Gate) -> None:
-        self.counts += gate.counts
-        self.gate_ns += gate.gate_ns
+    def add(self, counts: int, gate_ns: int, flags: Iterable[str]) -> None:
+        self.counts += counts
+        self.gate_ns += gate_ns
         self.gates += 1
-        self.flags.update(gate.flags)
+        self.flags.update(str(flag) for flag in flags)
+
+
+def whole(role: str, value: object) -> int:
+    """A plain int of whatever whole number a driver gives; ReplyError for anything else."""
+    try:
+        return operator.index(value)  # type: ignore[arg-type]
+    except TypeError:
+        raise ReplyError(role, f"it reports {value!r}; a driver gives whole numbers") from None
 
 
 class Hands:
@@ -97,6 +115,8 @@ class Hands:
         self._dwell_ends = False
         self._halted = False
         self._owed: Exception | None = None
+        self._grave: Exception | None = None
+        self._air_sensor: dict[str, str] | None = None
 
     def at_ns(self) -> int:
         """Nanoseconds since the session began."""
@@ -123,21 +143,24 @@ class Hands:
         try:
             await self._set_shutter(False)
             identities = {
-                role: asdict(await self._ask(role, device.identify(deadline_s=wait_s), wait_s))
+                role: await self._identify(role, device, wait_s)
                 for role, device in self._devices.by_role().items()
+                if role != "ambient"
             }
             if self._halted:
                 return Kind.HALTED, {"at_ns": self.at_ns()}
             wait_s = self._grip.move_timeout_s
             homed = await self._ask("drive", self._devices.drive.home(deadline_s=wait_s), wait_s)
-            self._position_steps = homed.steps
+            self._position_steps = whole("drive", homed.steps)
             ambient = await self._read_ambient()
+            if self._air_sensor is not None:
+                identities["ambient"] = self._air_sensor
         except Halted:
             return self._let_go()
         return Kind.PREPARED, {
             "at_ns": self.at_ns(),
             "identities": identities,
-            "home_steps": homed.steps,
+            "home_steps": self._position_steps,
             "ambient": ambient,
         }
 
@@ -165,7 +188,7 @@ class Hands:
         except Exception as error:
             if dwell.gates == 0:
                 raise
-            self._owed = error
+            await self._keep(error)
         if dwell.gates == 0:
             return Kind.HALTED, {"at_ns": self.at_ns()}
         body: dict[str, Any] = {
@@ -181,7 +204,7 @@ class Hands:
             "gate_ns": dwell.gate_ns,
             "gates": dwell.gates,
             "flags": sorted(dwell.flags),
-            "complete": dwell.gate_ns >= visit.dwell_ns,
+            "complete": dwell.gate_ns > visit.dwell_ns - SHORTEST_DWELL_NS,
         }
         if ambient is not None:
             body["ambient"] = ambient
@@ -190,14 +213,12 @@ class Hands:
     async def safe(self) -> Ending:
         """Shutter closed and motion stopped, whatever else fails. Never raises: problems are reported."""
         problems: list[str] = []
-        if self._owed is not None:
+        if self._owed is not None:  # repairing is over; what it was about is not forgotten
             problems.append(str(self._owed))
             self._owed = None
         # The shutter first: light harms more than motion. Its remembered state is not trusted here.
-        shutter = self._devices.shutter.set_open(False, deadline_s=self._grip.reply_timeout_s)
-        closed = await self._attempt("shutter", shutter, problems)
-        self._shutter_is_open = False if closed else None
-        stopped = await self._attempt("drive", self._devices.drive.halt(), problems)
+        closed = await self._close_shutter(problems)
+        stopped = await self._attempt("drive", lambda: self._devices.drive.halt(), problems)
         return Kind.SAFE, {
             "at_ns": self.at_ns(),
             "shutter": "closed" if closed else "unknown",
@@ -205,16 +226,37 @@ class Hands:
             "problems": problems,
         }
 
+    def grave(self) -> Exception | None:
+        """An error after counted gates that no repair mends; told once, after the point's record."""
+        error, self._grave = self._grave, None
+        return error
+
     # ---- parts ------------------------------------------------------------------------------------------
 
-    async def _attempt(self, role: str, call: Awaitable[None], problems: list[str]) -> bool:
+    async def _close_shutter(self, problems: list[str]) -> bool:
+        wait_s = self._grip.reply_timeout_s
+        closed = await self._attempt(
+            "shutter", lambda: self._devices.shutter.set_open(False, deadline_s=wait_s), problems
+        )
+        self._shutter_is_open = False if closed else None
+        return closed
+
+    async def _attempt(self, role: str, call: Callable[[], Awaitable[None]], problems: list[str]) -> bool:
         try:
             async with asyncio.timeout(self._grip.reply_timeout_s):
-                await call
+                await call()
         except Exception as error:
             problems.append(str(error) if isinstance(error, DeviceError) else f"{role}: {error!r}")
             return False
         return True
+
+    async def _keep(self, error: Exception) -> None:
+        """An error after counted gates: their record comes first."""
+        if isinstance(error, DeviceError) and error.repeat:
+            self._owed = error
+        else:
+            self._grave = error
+            await self._close_shutter([])
 
     def _let_go(self) -> Ending:
         if not self._halted:
@@ -251,23 +293,24 @@ class Hands:
             raise Halted("drive", "a halt was asked for between two moves")
         wait_s = self._grip.move_timeout_s
         moved = await self._ask("drive", self._devices.drive.move_to(steps, deadline_s=wait_s), wait_s)
-        return moved.steps
+        return whole("drive", moved.steps)
 
     async def _expose(self, visit: Visit, dwell: _Dwell) -> None:
-        while dwell.gate_ns < visit.dwell_ns and not self._dwell_ends:
+        while not self._dwell_ends:
+            if dwell.gates > 0 and visit.dwell_ns - dwell.gate_ns < SHORTEST_DWELL_NS:
+                return
             asked_ns = min(self._grip.longest_gate_ns, visit.dwell_ns - dwell.gate_ns)
             wait_s = asked_ns * 1e-9 + self._grip.reply_timeout_s
             gate = await self._ask(
                 "detector", self._devices.detector.gate(asked_ns, deadline_s=wait_s), wait_s
             )
-            if gate.gate_ns <= 0 or gate.counts < 0:
-                raise ReplyError(
-                    "detector", f"it reports {gate.counts} counts in a gate of {gate.gate_ns} ns"
-                )
-            dwell.add(gate)
-            if gate.counts * self._grip.dead_time_ns > HIGHEST_DEAD_TIME_FRACTION * gate.gate_ns:
+            counts, gate_ns = whole("detector", gate.counts), whole("detector", gate.gate_ns)
+            if gate_ns <= 0 or counts < 0:
+                raise ReplyError("detector", f"it reports {counts} counts in a gate of {gate_ns} ns")
+            dwell.add(counts, gate_ns, gate.flags)
+            if counts * self._grip.dead_time_ns > HIGHEST_DEAD_TIME_FRACTION * gate_ns:
                 dwell.flags.add("dead-time")
-            await self._guard_light(gate.counts / (gate.gate_ns * 1e-9))
+            await self._guard_light(counts / (gate_ns * 1e-9))
 
     async def _guard_light(self, rate_per_s: float) -> None:
         if rate_per_s > self._grip.highest_rate_per_s:
@@ -285,11 +328,23 @@ class Hands:
             await self._ask("shutter", self._devices.shutter.set_open(is_open, deadline_s=wait_s), wait_s)
             self._shutter_is_open = is_open
 
+    async def _identify(self, role: str, device: Device, wait_s: float) -> dict[str, str]:
+        identity = asdict(await self._ask(role, device.identify(deadline_s=wait_s), wait_s))
+        return {key: str(value) for key, value in identity.items()}
+
     async def _read_ambient(self) -> dict[str, float] | None:
-        if self._devices.ambient is None:
+        """The air, for the record. A sensor that fails costs its reading and a warning, never the run."""
+        sensor, wait_s = self._devices.ambient, self._grip.reply_timeout_s
+        if sensor is None:
             return None
-        wait_s = self._grip.reply_timeout_s
-        reading = asdict(await self._ask("ambient", self._devices.ambient.read(deadline_s=wait_s), wait_s))
-        if not all(math.isfinite(value) for value in reading.values()):
-            raise ReplyError("ambient", f"it reports {reading}")
+        try:
+            if self._air_sensor is None:
+                self._air_sensor = await self._identify("ambient", sensor, wait_s)
+            given = asdict(await self._ask("ambient", sensor.read(deadline_s=wait_s), wait_s))
+            reading = {key: float(value) for key, value in given.items()}
+            if not all(math.isfinite(value) for value in reading.values()):
+                raise ReplyError("ambient", f"it reports {reading}")
+        except Exception as error:
+            log.warning("no reading of the air: %s", error)
+            return None
         return reading

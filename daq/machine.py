@@ -29,7 +29,7 @@ from dataclasses import dataclass
 from enum import StrEnum
 from typing import Any
 
-from analysis.allocate import Visit, Window, next_sweep
+from analysis.allocate import SHORTEST_DWELL_NS, Visit, Window, next_sweep
 from daq.records import Body, Kind, StopReason
 from daq.tally import Snapshot, Tally
 
@@ -39,9 +39,6 @@ measures on, and the same in every replay however fast the computer is."""
 
 LOOK_RATIO = 1.2
 """Looks are geometric in the collected light."""
-
-SHORTEST_DWELL_NS = 1_000_000
-"""A rest of a dwell or of the light shorter than this is not worth a gate, and real counters refuse it."""
 
 FAULTS_IN_A_ROW = 3
 """A repeatable fault is repaired by preparing anew, this many times without a good point between."""
@@ -155,6 +152,7 @@ class Machine:
         self.sweeps_done = 0
         self.looks: list[dict[str, Any]] = []
         self.conclusion: dict[str, Any] | None = None
+        self.last_safe: dict[str, Any] | None = None
         self.bench_ns = 0
         self._session_base_ns = 0
         self._devices = False
@@ -266,6 +264,7 @@ class Machine:
         of_devices = body["action"] in (Action.PREPARE, Action.POINT)
         if body["action"] == Action.SAFE:
             self._made_safe = self._resting = True
+            self.last_safe = {"shutter": "unknown", "drive": "unknown", "problems": [body["text"]]}
         if of_devices or body["action"] == Action.SAFE:
             self.action = Action.NOTHING
             self._dwell_ending = False
@@ -279,6 +278,7 @@ class Machine:
         self.action = Action.NOTHING
         self._resting = True
         self._made_safe = self.stop is not None
+        self.last_safe = {key: body[key] for key in ("shutter", "drive", "problems")}
 
     def _conclusion_record(self, body: Body) -> None:
         self.action = Action.NOTHING
@@ -392,6 +392,8 @@ class Machine:
             self._first = pending.request.swept
         if pending.answer["goal_reached"]:
             self._stop_for(StopReason.GOAL_REACHED)
+        elif "conflict" in pending.answer.get("flags", ()):
+            self._stop_for(StopReason.CONFLICT)  # both claims stand for good: more light cannot part them
 
     def _light_left_ns(self) -> int | None:
         return None if self.light_limit_ns is None else self.light_limit_ns - self.light_ns

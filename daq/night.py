@@ -9,13 +9,14 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-from daq.carry import Observer, Stopper, carry_run, journal_path_of
-from daq.hands import Devices
+from daq.carry import Observer, Outcome, Stopper, carry_run, journal_path_of, left_unsafe
+from daq.hands import Devices, close_devices
 from daq.head import make_head
-from daq.journal import FolderLock, Journal
+from daq.journal import FolderLock, Journal, JournalError
 from daq.machine import Machine
 from daq.nightfile import LoadedNight
 from daq.records import StopReason, run_identity
+from daq.runner import RunFailed
 from daq.target import LoadedTarget
 from drivers.bench import LoadedBench
 from drivers.clock import Clock
@@ -45,21 +46,34 @@ class NightOrder:
         return None if self.night is None else self.night.night.limits.time_s
 
 
-def open_devices(loaded: LoadedBench, clock: Clock, seed: int) -> Devices:
-    """Everything the bench file names. Raises SettingsError, or DeviceError if one does not answer."""
+async def open_devices(loaded: LoadedBench, clock: Clock, seed: int) -> Devices:
+    """Everything the bench file names. Raises SettingsError, or DeviceError if one does not answer; what was
+    opened before that is closed again."""
     bench, factories = loaded.bench, load_factories(loaded)
+    tables = {
+        "drive": bench.drive.options,
+        "detector": bench.detector.options,
+        "shutter": bench.shutter.options,
+    }
+    if bench.ambient is not None:
+        tables["ambient"] = bench.ambient.options
+    world: Any = None
+    opened: dict[str, Any] = {}
 
-    def opened(role: str, options: dict[str, Any], world: Any) -> Any:
+    def open_one(role: str, options: dict[str, Any]) -> Any:
         context = DriverContext(clock=clock, role=role, seed=seed, folder=str(loaded.folder), world=world)
         return make(factories[role], options, context, str(loaded.path))
 
-    world = None if bench.world is None else opened("world", bench.world.options, None)
-    return Devices(
-        drive=opened("drive", bench.drive.options, world),
-        detector=opened("detector", bench.detector.options, world),
-        shutter=opened("shutter", bench.shutter.options, world),
-        ambient=None if bench.ambient is None else opened("ambient", bench.ambient.options, world),
-    )
+    try:
+        if bench.world is not None:
+            world = open_one("world", bench.world.options)
+        for role, options in tables.items():
+            opened[role] = open_one(role, options)
+    except BaseException:
+        for problem in await close_devices(opened):
+            log.warning("closing %s", problem)
+        raise
+    return Devices(opened["drive"], opened["detector"], opened["shutter"], opened.get("ambient"))
 
 
 async def run_night(
@@ -69,47 +83,68 @@ async def run_night(
     observe: Observer,
     on_run: Callable[[dict[str, Any]], None] = lambda head: None,
     stopper: Stopper | None = None,
-) -> list[dict[str, Any]]:
-    """Run it; one summary a finished run. Raises SettingsError before anything is written or moved."""
+) -> Outcome:
+    """Run it. Raises SettingsError before anything is written or moved, DeviceError if none can be opened.
+
+    A run that breaks off is a problem told and does not cost the others, unless the bench may be unsafe.
+    """
     start_utc_ns = clock.utc_ns()
     stopper = stopper or Stopper()
+    outcome = Outcome(not_started=[target.target.name for target in order.targets])
     heads = [_head(order, start_utc_ns, i, target) for i, target in enumerate(order.targets, start=1)]
     load_factories(order.bench)
     _make_folder(order.out)
-    summaries: list[dict[str, Any]] = []
     with FolderLock(order.out):
-        devices = open_devices(order.bench, clock, order.seed)
+        devices = await open_devices(order.bench, clock, order.seed)
         timer = None
         if order.time_limit_s is not None:
             loop = asyncio.get_running_loop()
             timer = loop.call_later(order.time_limit_s, stopper.stop, StopReason.NIGHT_DEADLINE, "night")
         try:
             for head in heads:
-                head["created_utc_ns"] = clock.utc_ns()
-                on_run(head)
-                journal = Journal.create(
-                    journal_path_of(order.out, head["run_id"]), head, threaded=not clock.is_virtual
-                )
-                summary = await carry_run(
-                    head,
-                    journal,
-                    Machine(head["plan"]),
-                    devices=devices,
-                    clock=clock,
-                    session=1,
-                    reason="start",
-                    observe=observe,
-                    stopper=stopper,
-                )
-                summaries.append(summary)
-                if stopper.reason is not None or summary["stop_reason"] in ENDS_THE_NIGHT:
+                outcome.not_started.pop(0)
+                try:
+                    summary = await _one_run(order, head, devices, clock, observe, on_run, stopper)
+                except (RunFailed, JournalError) as error:
+                    outcome.problems.append(f"{head['target']['name']}: {error}")
+                else:
+                    outcome.runs.append(summary)
+                    if left_unsafe(summary) or summary["stop_reason"] in ENDS_THE_NIGHT:
+                        break
+                if stopper.reason is not None:
                     break
         finally:
             if timer is not None:
                 timer.cancel()
             for problem in await devices.close():
                 log.warning("closing %s", problem)
-    return summaries
+    outcome.stopped = stopper.reason
+    return outcome
+
+
+async def _one_run(
+    order: NightOrder,
+    head: dict[str, Any],
+    devices: Devices,
+    clock: Clock,
+    observe: Observer,
+    on_run: Callable[[dict[str, Any]], None],
+    stopper: Stopper,
+) -> dict[str, Any]:
+    head["created_utc_ns"] = clock.utc_ns()
+    on_run(head)
+    journal = Journal.create(journal_path_of(order.out, head["run_id"]), head, threaded=not clock.is_virtual)
+    return await carry_run(
+        head,
+        journal,
+        Machine(head["plan"]),
+        devices=devices,
+        clock=clock,
+        session=1,
+        reason="start",
+        observe=observe,
+        stopper=stopper,
+    )
 
 
 def _make_folder(out: Path) -> None:

@@ -55,6 +55,7 @@ def draw_up(
     fwhm_nm = expected_fwhm_nm(box_widths_nm=boxes_nm, gaussian_fwhm_nm=line_nm)
     window = _window(loaded, target, mount, where, fwhm_nm, nm_per_step, refuse)
     decide = target.target.goal.decision
+    _check_goal(target, loaded, fwhm_nm, refuse)
     goal_pm = target.target.goal.separation_uncertainty_pm
     question = Question(
         feature=Feature(
@@ -190,8 +191,22 @@ def _window(
             f"window: needs the drive at {lowest} to {highest} steps, the bench allows "
             f"{drive.lowest_steps} to {drive.highest_steps}"
         )
+    if lowest - drive.backlash_steps < drive.lowest_steps:
+        raise refuse(
+            f"window: begins at {lowest} steps; to arrive from below the drive needs its backlash_steps = "
+            f"{drive.backlash_steps} of room above lowest_steps = {drive.lowest_steps}"
+        )
     step_nm = fwhm_nm / 8 if sweep.step_pm is None else 1e-3 * sweep.step_pm
     step_steps = 1 if isinstance(mount, TableMount) else max(1, round(step_nm / nm_per_step))
+    if sweep.step_pm is not None:
+        _check_step(sweep.step_pm, fwhm_nm, nm_per_step, isinstance(mount, TableMount), refuse)
+    groups = min(DITHER_GROUPS, step_steps)
+    period = drive.microstep_period_steps
+    if period is not None and (step_steps // groups) % period == 0:
+        raise refuse(
+            f"sweep.step_pm: {step_steps} steps meet the drive's periodic error (microstep_period_steps = "
+            f"{period}) at the same phase everywhere; choose another"
+        )
     if (highest - lowest) // step_steps < 12:
         raise refuse(
             f"window: holds only {(highest - lowest) // step_steps + 1} positions of "
@@ -202,7 +217,35 @@ def _window(
         lowest_steps=lowest,
         highest_steps=highest,
         step_steps=step_steps,
-        groups=min(DITHER_GROUPS, step_steps),
+        groups=groups,
         dwell_ns=dwell_ns,
         dark_ns=DARK_DWELLS * dwell_ns,
     )
+
+
+def _check_step(step_pm: float, fwhm_nm: float, nm_per_step: float, is_table: bool, refuse: Any) -> None:
+    given = f"sweep.step_pm = {step_pm:g}"
+    if is_table:
+        raise refuse(f"{given}: a recorded spectrum has its own rows; leave step_pm out")
+    if step_pm < 0.5e3 * nm_per_step:
+        raise refuse(
+            f"{given}: one step of the drive is {1e3 * nm_per_step:.3g} pm; nothing finer is possible"
+        )
+    if step_pm > 0.25e3 * fwhm_nm:
+        raise refuse(
+            f"{given}: must be at most a quarter of a single line's width of {1e3 * fwhm_nm:.3g} pm on this "
+            "bench, or the line is stepped over; an eighth is usual"
+        )
+
+
+def _check_goal(target: LoadedTarget, loaded: LoadedBench, fwhm_nm: float, refuse: Any) -> None:
+    """A goal below what the scale alone leaves is refused before light is spent."""
+    goal_pm = target.target.goal.separation_uncertainty_pm
+    smallest_pm = target.target.goal.decision.smallest_separation_pm or 1e3 * fwhm_nm
+    floor_pm = loaded.bench.scale.relative_uncertainty * smallest_pm
+    if goal_pm is not None and goal_pm <= floor_pm:
+        raise refuse(
+            f"goal.separation_uncertainty_pm = {goal_pm:g}: the scale of the bench (relative_uncertainty = "
+            f"{loaded.bench.scale.relative_uncertainty:g}) leaves {floor_pm:.2g} pm of {smallest_pm:.3g} pm; "
+            "no light can reach the goal"
+        )

@@ -43,6 +43,7 @@ class StopReason(StrEnum):
     GOAL_REACHED = "goal-reached"
     TIME_LIMIT = "time-limit"
     LIGHT_LIMIT = "light-limit"
+    CONFLICT = "conflict"
     STOPPED_BY_USER = "stopped-by-user"
     NIGHT_DEADLINE = "night-deadline"
     FAULT = "fault"

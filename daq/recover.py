@@ -7,7 +7,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-from daq.carry import Observer, Stopper, carry_run, with_file
+from daq.carry import Observer, Outcome, Stopper, carry_run, with_file
 from daq.head import path_of
 from daq.journal import FolderLock, Journal, JournalError, read_journal
 from daq.machine import Machine, MachineError
@@ -34,14 +34,6 @@ class Left:
     @property
     def file(self) -> Path:
         return self.path.with_suffix(".h5")
-
-
-@dataclass(frozen=True, slots=True)
-class Recovered:
-    """One summary for each run made whole, and what stood in the way of the others."""
-
-    runs: list[dict[str, Any]]
-    problems: list[str]
 
 
 def find_journals(folder: Path) -> list[Path]:
@@ -93,7 +85,7 @@ async def recover(
     observe: Observer,
     on_run: Callable[[dict[str, Any]], None],
     stopper: Stopper,
-) -> Recovered:
+) -> Outcome:
     """Every run of the folder concluded and with a complete file; a summary for each that was not.
 
     Without `resume` no device is touched: a run that had not ended is concluded from the points it has, with
@@ -102,7 +94,7 @@ async def recover(
     folder, JournalError if another gratingd works in it.
     """
     journals = find_journals(folder)
-    done = Recovered([], [])
+    done = Outcome()
     with FolderLock(folder):
         for path in journals:
             try:
@@ -120,6 +112,7 @@ async def recover(
                 done.runs.append(summary)
             if stopper.reason is not None:
                 break
+    done.stopped = stopper.reason
     return done
 
 
@@ -134,7 +127,7 @@ async def _carry_on(
     left: Left, clock: Clock, resume: bool, observe: Observer, stopper: Stopper
 ) -> dict[str, Any]:
     machine = refold(left.path, left.head)
-    devices = open_devices(bench_of(left), clock, left.head["seed"]) if resume else None
+    devices = await open_devices(bench_of(left), clock, left.head["seed"]) if resume else None
     journal = Journal.open(left.path, threaded=not clock.is_virtual)
     try:
         return await carry_run(

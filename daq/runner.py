@@ -195,6 +195,9 @@ class Runner:
         except Exception as error:
             kind, body = Kind.FAULT, self._fault(action, error)
         self.post(kind, body)
+        grave = None if self._hands is None else self._hands.grave()
+        if grave is not None:
+            self.post(Kind.FAULT, self._fault("dwell", grave))
 
     async def _halt(self) -> None:
         assert self._hands is not None

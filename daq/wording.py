@@ -32,7 +32,7 @@ def look_in_words(look: Mapping[str, Any]) -> str:
         return f"pair, {separation} pm apart, ratio {with_uncertainty(look['ratio'], look['ratio_u'])}"
     if look["verdict"] == "single":
         return f"single ({evidence})"
-    return f"undecided so far: {evidence}"
+    return f"undecided: {evidence}"
 
 
 def _share(evidence: float, bound: float) -> str:

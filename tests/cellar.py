@@ -30,7 +30,7 @@ wavelength_air_nm = 313.155
 half_width_fwhm = 2.5
 [sweep]
 dwell_s = 0.5
-step_pm = 5.0
+step_pm = 4.5
 [goal]
 separation_uncertainty_pm = 0.6
 [limits]
@@ -132,7 +132,7 @@ def run(
         observe(notice)
 
     async def work(clock: Clock) -> dict[str, Any]:
-        devices = open_devices(bench, clock, seed)
+        devices = await open_devices(bench, clock, seed)
         worlds.append(devices.drive._world)
         journal = Journal.create(journal_path_of(folder, head["run_id"]), head, threaded=False)
         return await carry_run(

@@ -7,6 +7,7 @@ import math
 from pathlib import Path
 from typing import Any
 
+import numpy as np
 import pytest
 from cellar import QUICK_TARGET, bench_file, fault, run, target_file
 
@@ -37,7 +38,6 @@ async def _hang(*_: object, **__: object) -> None:
         ("drive", "halt"),
         ("detector", "gate"),
         ("shutter", "set_open"),
-        ("ambient", "read"),
     ],
 )
 def test_a_driver_that_never_answers_is_not_waited_for(tmp_path: Path, role: str, call: str) -> None:
@@ -76,27 +76,82 @@ def test_a_record_that_cannot_be_taken_is_not_journalled(tmp_path: Path) -> None
     assert "dance" in outcome.of_kind(Kind.FAULT)[0]["text"]
 
 
-def test_readings_without_sense_are_reply_errors(tmp_path: Path) -> None:
+def test_air_without_sense_is_not_recorded(tmp_path: Path) -> None:
     async def nonsense(*, deadline_s: float) -> AmbientReading:
         return AmbientReading(math.nan, 101_325.0, 50.0)
 
     outcome = run(tmp_path, wishes=[(0.0, lambda r: _patched(r, "ambient", "read", nonsense))])
+    assert outcome.summary["stop_reason"] == "goal-reached"
+    assert outcome.of_kind(Kind.PREPARED)[0]["ambient"] is None
+
+
+@pytest.mark.parametrize("counts", [-3, 3.5, "7", None])
+def test_counts_without_sense_are_reply_errors(tmp_path: Path, counts: Any) -> None:
+    async def nonsense(gate_ns: int, *, deadline_s: float) -> Gate:
+        return Gate(counts, gate_ns)
+
+    outcome = run(tmp_path, wishes=[(0.0, lambda r: _patched(r, "detector", "gate", nonsense))])
     assert outcome.summary["stop_reason"] == "fault"
     assert {f["error"] for f in outcome.of_kind(Kind.FAULT)} == {"ReplyError"}
-
-    async def negative(gate_ns: int, *, deadline_s: float) -> Gate:
-        return Gate(-3, gate_ns)
-
-    outcome = run(tmp_path / "b", wishes=[(0.0, lambda r: _patched(r, "detector", "gate", negative))])
-    assert outcome.summary["stop_reason"] == "fault"
     assert outcome.of_kind(Kind.POINT) == []
+
+
+def _watched(runner: Runner, change: Any) -> None:
+    """The detector's own gates, seen through `change`."""
+    gate = runner._hands._devices.detector.gate
+
+    async def changed(gate_ns: int, *, deadline_s: float) -> Gate:
+        return change(await gate(gate_ns, deadline_s=deadline_s))
+
+    _patched(runner, "detector", "gate", changed)
+
+
+def test_numbers_of_an_array_library_are_whole_numbers_too(tmp_path: Path) -> None:
+    def change(gate: Gate) -> Gate:
+        return Gate(np.int64(gate.counts), np.int64(gate.gate_ns))  # type: ignore[arg-type]
+
+    outcome = run(tmp_path, wishes=[(0.0, lambda r: _watched(r, change))])
+    assert outcome.summary["stop_reason"] == "goal-reached"
+
+
+def test_a_counter_whose_gates_are_a_little_short_is_taken_as_it_is(tmp_path: Path) -> None:
+    """Many quantise the gate; nobody asks for the 37 ns that are missing."""
+    outcome = run(tmp_path, wishes=[(0.0, lambda r: _watched(r, lambda g: Gate(g.counts, g.gate_ns - 37)))])
+    assert outcome.summary["stop_reason"] == "goal-reached"
+    points = outcome.of_kind(Kind.POINT)
+    assert {p["gates"] for p in points if p["light"]} == {1}
+    assert all(p["complete"] for p in points)
+
+
+def test_over_light_after_counted_gates_closes_the_shutter_and_stops(tmp_path: Path) -> None:
+    """The third gate of a dwell trips: two are kept, and the next record is the fault."""
+    light = 20
+    bench = bench_file(tmp_path, faults=fault("detector", "gate", light, "over-light"))
+    outcome = run(tmp_path, bench=bench, target=target_file(tmp_path, LONG_DWELLS))
+    kinds = [(r.kind, r.body.get("gates")) for r in outcome.records]
+    at = next(i for i, (kind, _) in enumerate(kinds) if kind == Kind.FAULT)
+    assert kinds[at - 1][0] == Kind.POINT
+    assert not outcome.records[at - 1].body["complete"]
+    assert outcome.summary["stop_reason"] == "over-light"
+    assert not outcome.world.shutter.is_open
+
+
+def test_a_driver_that_fails_before_it_can_be_awaited_does_not_spoil_making_safe(tmp_path: Path) -> None:
+    def broken(is_open: bool, *, deadline_s: float) -> None:
+        raise TypeError("no such argument")
+
+    outcome = run(
+        tmp_path, wishes=[(40.0, lambda r: _patched(r, "shutter", "set_open", broken)), (41.0, _stop)]
+    )
+    assert outcome.summary["safe"]["shutter"] == "unknown"
+    assert outcome.summary["safe"]["drive"] == "stopped"
 
 
 LONG_DWELLS = QUICK_TARGET.replace("dwell_s = 0.5", "dwell_s = 3.4").replace("400.0", "900.0")
 
 
 def test_gates_counted_before_a_fault_are_kept(tmp_path: Path) -> None:
-    """The fifth gate of a dark of 13.6 s and a later one of a light of 3.4 s fail: those before them count."""
+    """A gate in a dark of 13.6 s and one in a light of 3.4 s fail: those before them count."""
     bench = bench_file(
         tmp_path, faults=fault("detector", "gate", 5, "link") + fault("detector", "gate", 17, "link")
     )

@@ -9,6 +9,7 @@ from pathlib import Path
 import pytest
 from cellar import QUICK_TARGET, Outcome, bench_file, fault, run, target_file
 
+from daq.carry import left_unsafe
 from daq.machine import Machine
 from daq.records import Kind, StopReason
 from daq.runfile import read_run
@@ -22,8 +23,6 @@ CALLS = [
     ("detector", "gate", (1, 2, 17)),
     ("shutter", "identify", (1,)),
     ("shutter", "set_open", (1, 2, 3)),
-    ("ambient", "identify", (1,)),
-    ("ambient", "read", (1, 2)),
 ]
 EVERY_CALL = [(device, call, nth) for device, call, numbers in CALLS for nth in numbers]
 
@@ -55,6 +54,8 @@ def test_a_quiet_run_reaches_its_goal(tmp_path: Path) -> None:
     assert summary["separation_pm"] == pytest.approx(29.0, abs=4 * summary["separation_u_pm"])
     assert summary["ratio"] == pytest.approx(0.7, abs=4 * summary["ratio_u"])
     assert not outcome.world.shutter.is_open
+    assert summary["safe"] == {"shutter": "closed", "drive": "stopped", "problems": []}
+    assert not left_unsafe(summary)
     assert [notice.seq for notice in outcome.notices] == [record.seq for record in outcome.records[1:]]
 
 
@@ -101,6 +102,21 @@ def test_a_fault_that_stays_stops_after_three_repairs(
         assert not outcome.world.shutter.is_open
 
 
+@pytest.mark.parametrize("call", ["identify", "read"])
+@pytest.mark.parametrize("kind", ["link", "reply", "hang", "crash", "hardware"])
+@pytest.mark.parametrize("times", [1, 10_000])
+def test_an_air_sensor_that_fails_costs_its_reading_only(
+    tmp_path: Path, call: str, kind: str, times: int
+) -> None:
+    """The air is recorded, not used: nothing of the night depends on it."""
+    outcome = run(tmp_path, bench=bench_file(tmp_path, faults=fault("ambient", call, 1, kind, times)))
+    check_whole(outcome)
+    assert outcome.summary["stop_reason"] == "goal-reached"
+    assert outcome.of_kind(Kind.PREPARED)[0]["ambient"] is None
+    darks = [p for p in outcome.of_kind(Kind.POINT) if not p["light"]]
+    assert any("ambient" in p for p in darks) is (times == 1)
+
+
 @pytest.mark.parametrize("call", ["halt", "set_open"])
 def test_making_safe_goes_on_when_half_of_it_fails(tmp_path: Path, call: str) -> None:
     device = "drive" if call == "halt" else "shutter"
@@ -114,6 +130,7 @@ def test_making_safe_goes_on_when_half_of_it_fails(tmp_path: Path, call: str) ->
     safe = outcome.of_kind(Kind.SAFE)[-1]
     expected = ("closed", "unknown") if call == "halt" else ("unknown", "stopped")
     assert (safe["shutter"], safe["drive"]) == expected
+    assert left_unsafe(outcome.summary)
 
 
 def test_over_light_closes_the_shutter_before_anything_else(tmp_path: Path) -> None:
