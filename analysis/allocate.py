@@ -14,7 +14,6 @@ from dataclasses import asdict, dataclass
 from functools import lru_cache
 from typing import Any
 
-
 SHORTEST_DWELL_NS = 1_000_000
 """A rest of a dwell or of the light shorter than this is not worth a gate, and real counters refuse it."""
 

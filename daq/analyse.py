@@ -13,6 +13,7 @@ import numpy as np
 from analysis.counting import Counts
 from analysis.question import Question, to_json
 from analysis.verdict import guess_feature, weigh_once
+from daq.journal import is_journal
 from daq.looks import answer
 from daq.machine import Machine, MachineError, StartLook
 from daq.plan import in_medium
@@ -24,6 +25,7 @@ from daq.target import LoadedTarget
 from drivers.errors import DataError
 
 HDF5_ENDINGS = frozenset({".h5", ".hdf5", ".nxs"})
+HDF5_SIGNATURE = b"\x89HDF\r\n\x1a\n"
 
 
 @dataclass(frozen=True, slots=True)
@@ -41,9 +43,27 @@ class Asked:
 
 def analyse(path: Path, asked: Asked) -> dict[str, Any]:
     """One file's summary. Raises DataError naming the file when it cannot be used."""
-    if path.suffix.lower() in HDF5_ENDINGS:
+    if is_run_file(path):
         return _analyse_run(read_run(path))
+    if is_journal(path):
+        raise DataError(
+            f"{path}: is a journal, not a spectrum; analyse its run file (.h5). "
+            f"If there is none yet: gratingd recover {path.parent}"
+        )
     return _analyse_spectrum(read_spectrum(path), asked)
+
+
+def is_run_file(path: Path) -> bool:
+    """Whether it is to be read as HDF5: by what it holds, whatever its name, or else by its ending."""
+    if path.suffix.lower() in HDF5_ENDINGS:
+        return True
+    try:
+        if not path.is_file():
+            return False
+        with path.open("rb") as stream:
+            return stream.read(8) == HDF5_SIGNATURE
+    except OSError:
+        return False
 
 
 # ---- a run ----------------------------------------------------------------------------------------------
@@ -52,19 +72,22 @@ def analyse(path: Path, asked: Asked) -> dict[str, Any]:
 def _analyse_run(run: RunData) -> dict[str, Any]:
     """The run's looks and its conclusion computed anew, cold, from the records in the file alone."""
     try:
-        machine, look = redo(run)
+        return _summary(run, *redo(run))
     except (KeyError, TypeError, ValueError, MachineError) as error:
         raise DataError(
             f"{run.path}: damaged: its records do not fit together ({type(error).__name__}: {error}); "
             "make it again with 'gratingd recover' if its journal is still there"
         ) from error
+
+
+def _summary(run: RunData, machine: Machine, look: dict[str, Any] | None) -> dict[str, Any]:
     recorded = None if run.conclusion is None else run.conclusion["look"]
     return {
         "target": run.head["target"]["name"],
         **verdict_fields(look),
         "stop_reason": None if run.conclusion is None else run.conclusion["stop_reason"],
-        "bench_time_s": machine.bench_ns * 1e-9,
-        "light_s": machine.light_ns * 1e-9,
+        "bench_time_s": machine.bench_ns / 1e9,
+        "light_s": machine.light_ns / 1e9,
         "points": machine.points,
         "medium": run.head["plan"]["medium"],
         "separation": None if look is None else separation_in_all_units(look, run.head["plan"]["medium"]),
@@ -102,11 +125,19 @@ def _reproduces(recorded: Mapping[str, Any] | None, look: Mapping[str, Any] | No
     if json.dumps(recorded, sort_keys=True) == json.dumps(look, sort_keys=True):
         return "bit-equal"
     was, now = _numbers(recorded), _numbers(look)
-    if was.shape != now.shape:
+    if was.shape != now.shape or recorded["verdict"] != look["verdict"]:
         return "different"
     scale = np.maximum(np.abs(was), np.abs(now))
     worst = float(np.max(np.abs(was - now) / np.where(scale > 0, scale, 1.0), initial=0.0))
     return f"within {worst:.1e} relative"
+
+
+def comparison(reproduces: str) -> str:
+    """A summary's `reproduces` as the end of a sentence."""
+    if reproduces == "nothing to compare":
+        return "no recorded conclusion to compare with"
+    joined = {"bit-equal": "bit-equal to", "different": "different from"}
+    return f"{joined.get(reproduces, f'{reproduces} of')} the recorded conclusion"
 
 
 def _numbers(value: Any) -> Any:

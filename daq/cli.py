@@ -4,10 +4,14 @@ from __future__ import annotations
 
 import contextlib
 import json
+import os
+import signal
 import sys
 from collections.abc import Awaitable, Callable, Iterator, Mapping, Sequence
 from enum import IntEnum
+from functools import partial
 from pathlib import Path
+from types import FrameType
 from typing import TYPE_CHECKING, Any, NoReturn
 
 import click
@@ -143,7 +147,9 @@ def measure(bench: str, target: str, out: Path, seed: int, operator: str | None,
     help="How often a single line may be called a pair.",
 )
 @json_option
+@click.pass_context
 def analyse(
+    context: click.Context,
     files: Sequence[Path],
     target: str | None,
     line: float | None,
@@ -153,16 +159,24 @@ def analyse(
 ) -> None:
     """Weigh files again: a run's HDF5 file from its own records, or a measured spectrum as CSV.
 
-    A CSV has a header line: wavelength_air_nm or wavelength_vacuum_nm, counts, optionally sigma and pixel.
-    Without sigma the counts are taken as Poisson.
+    A run file brings its own target; options other than --json are for spectra. A CSV has a header line:
+    wavelength_air_nm or wavelength_vacuum_nm, counts, optionally sigma and pixel. Without sigma the counts
+    are taken as Poisson.
     """
     if known_line and line is None and target is None:
         raise click.UsageError("--known-line needs --line: where the main line is expected on the same scale")
     if target is not None and (line is not None or known_line):
         raise click.UsageError("give --target or --line and --known-line, not both")
-    from daq.analyse import Asked
+    from daq.analyse import Asked, comparison, is_run_file
     from daq.analyse import analyse as analyse_file
 
+    given = _given(context, "target", "line", "known_line", "false_alarm")
+    for file in files:
+        if given and is_run_file(file):
+            raise click.UsageError(
+                f"{file}: a run file (HDF5) is weighed again by the target in its own records, without "
+                f"{', '.join(given)}; leave that out, or give spectra (CSV) in a command of their own"
+            )
     asked = Asked(line_nm=line, known_lines_nm=known_line, false_alarm=false_alarm)
     if target is not None:
         from dataclasses import replace
@@ -182,6 +196,9 @@ def analyse(
         click.echo(f"gratingd: {problem}", err=True)
     if runs:
         _print_runs(runs, as_json)
+    for run in runs:
+        if run["reproduces"] is not None and not as_json:
+            click.echo(f"{run['target']}: re-analysis: {comparison(run['reproduces'])}")
     if problems:
         sys.exit(Exit.MISTAKE)
 
@@ -217,6 +234,12 @@ def recover(folder: Path, resume: bool, as_json: bool) -> None:
 
 
 # ---- parts ----------------------------------------------------------------------------------------------
+
+
+def _given(context: click.Context, *names: str) -> list[str]:
+    """Those of the options that the user typed, as they are spelled."""
+    typed = click.core.ParameterSource.COMMANDLINE
+    return [f"--{name.replace('_', '-')}" for name in names if context.get_parameter_source(name) is typed]
 
 
 def _run_night(
@@ -281,10 +304,9 @@ def _signals(loop: AbstractEventLoop, stopper: Stopper, clock: Clock) -> Iterato
     """SIGINT, SIGTERM and SIGHUP ask for a clean stop, each time they come.
 
     SIGHUP, a terminal that was closed, would otherwise end the process with the shutter open; a run started
-    to survive that (nohup) ignores it and goes on.
+    to survive that (nohup) ignores it and goes on. Once the work has ended they are ignored until the command
+    has: whoever presses Ctrl-C once too often still gets what came out, and the exit code that belongs to it.
     """
-    import signal
-
     from daq.records import StopReason
 
     def stop(number: int) -> None:
@@ -303,7 +325,8 @@ def _signals(loop: AbstractEventLoop, stopper: Stopper, clock: Clock) -> Iterato
         for number in attended:
             if not clock.is_virtual:
                 loop.remove_signal_handler(number)
-            signal.signal(number, before[number])
+            signal.signal(number, signal.SIG_IGN)
+            click.get_current_context().call_on_close(partial(signal.signal, number, before[number]))
 
 
 def _progress(*, live: bool, as_json: bool) -> Progress:
@@ -384,8 +407,20 @@ def _new_folder(name: str) -> Path:
     return folder
 
 
+def _leave(number: int, frame: FrameType | None) -> None:
+    """Ctrl-C while no run is under way: no device or file is open, so the process may just end.
+
+    An exception would not do: some compiled modules turn one that comes while they are being imported into an
+    ImportError or a SystemError of their own.
+    """
+    os.write(2, b"gratingd: stopped by Ctrl-C; no run was under way\n")
+    os._exit(Exit.STOPPED)
+
+
 def main() -> None:
     """The program, after the guard has looked at the packages."""
+    if signal.getsignal(signal.SIGINT) is signal.default_int_handler:  # not where it is ignored on purpose
+        signal.signal(signal.SIGINT, _leave)
     try:
         gratingd(prog_name="gratingd")
     except OSError as error:  # standard output on a full disk; devices and files have errors of their own

@@ -291,9 +291,39 @@ def _analysis(entry: h5py.Group, summary: Summary) -> None:
     elif look is not None:
         put(result, "verdict", look["verdict"])
     if look is not None:
-        tree(group(analysis, "look", "NXcollection"), look)
+        whole = group(analysis, "look", "NXcollection")
+        tree(whole, {name: value for name, value in look.items() if name != "exclusion"})
+        _exclusion(whole, look)
     if summary.looks:
         tree(group(analysis, "looks", "NXcollection"), table(summary.looks))
+
+
+def _exclusion(parent: h5py.Group, look: Mapping[str, Any]) -> None:
+    """What a single line excludes: meaningless beside a pair, and a look without a line has none."""
+    if look["verdict"] == "pair" or not look["exclusion"]:
+        return
+    made = group(parent, "exclusion", "NXcollection")
+    made.attrs["confidence"] = 0.95
+    made.attrs["bound"] = "one-sided upper limit at each separation by itself"
+    made.attrs["look"] = look["number"]
+    made.attrs["method"] = (
+        "fixed-sample: a faint second line is added to this look's single fit to first order, all else free; "
+        "limit = max(estimate, 0) + 1.645 u. It does not allow for repeated looks or for an early stop."
+    )
+    points = look["exclusion"]
+    put(
+        made,
+        "separation_nm",
+        [point["separation_nm"] for point in points],
+        long_name="second line's wavelength less the main line's (nm)",
+    )
+    put(
+        made,
+        "ratio_limit",
+        [point["ratio_limit"] for point in points],
+        units="1",
+        long_name="area of a second line over the main line's, at most; NaN: nothing below 1 is excluded",
+    )
 
 
 def _config(entry: h5py.Group, summary: Summary, complete: bool) -> None:

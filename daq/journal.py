@@ -84,15 +84,17 @@ class Journal:
         try:
             with _guarded(sqlite3.connect(path, isolation_level=None, check_same_thread=False)) as database:
                 database.execute(f"PRAGMA page_size={_PAGE_SIZE}")
-                database.execute(f"PRAGMA application_id={_APPLICATION_ID}")
-                _configure(database, threaded)
-                # table and head in one transaction: a journal has both or nothing
+                database.execute(f"PRAGMA synchronous={'FULL' if threaded else 'OFF'}")
+                # Identity, table and head in one transaction: a journal has all of them or nothing. They are
+                # written before there is a write-ahead log, so that a copy without it still says what it is.
                 database.execute("BEGIN IMMEDIATE")
+                database.execute(f"PRAGMA application_id={_APPLICATION_ID}")
                 database.execute(
                     "CREATE TABLE rec(seq INTEGER PRIMARY KEY, kind TEXT NOT NULL, body TEXT NOT NULL)"
                 )
                 database.execute("INSERT INTO rec VALUES (1, 'head', ?)", (body,))
                 database.execute("COMMIT")
+                _configure(database, threaded)
         except sqlite3.Error as error:
             _raise_write(path, error)
         if threaded:
@@ -311,6 +313,21 @@ def newest_seq(path: str | os.PathLike[str]) -> int:
         _raise_damaged(path, str(error))
 
 
+def is_journal(path: Path) -> bool:
+    """Whether a file is one by its ending or by SQLite's header; for files that nobody here has open."""
+    if not path.is_file():
+        return False
+    if path.suffix == ".journal":
+        return True
+    try:
+        with path.open("rb") as stream:
+            header = stream.read(72)
+    except OSError:
+        return False
+    # https://www.sqlite.org/fileformat.html, section 1.3: the application id stands at byte 68, big-endian
+    return header.startswith(b"SQLite format 3\0") and header[68:] == _APPLICATION_ID.to_bytes(4, "big")
+
+
 class FolderLock:
     """Only one gratingd at a time works in a data folder: a lock on `.gratingd.lock` in it.
 
@@ -389,6 +406,7 @@ def _connect_existing(path: Path) -> sqlite3.Connection:
         raise JournalError(f"{path}: is a directory; name the journal file in it")
     if not path.exists():
         raise JournalError(f"{path}: no such journal")
+    _check_not_empty(path)
     try:
         # mode=rw: replays a write-ahead log if there is one, but never makes an empty file
         return sqlite3.connect(
@@ -404,15 +422,34 @@ def _connect_existing(path: Path) -> sqlite3.Connection:
         ) from error
 
 
+def _check_not_empty(path: Path) -> None:
+    """Before SQLite sees it: beside an empty file it would delete a write-ahead log as left over."""
+    if path.stat().st_size > 0:
+        return
+    log = path.with_name(f"{path.name}-wal")
+    if log.exists():
+        raise JournalError(
+            f"{path}: is empty, but {log.name} beside it may hold its records; keep both, and restore the "
+            "journal from a copy"
+        )
+    raise JournalError(
+        f"{path}: is empty: gratingd was killed before its first record, or the file was cut to nothing when "
+        "it was copied; without another copy of it there is nothing to recover"
+    )
+
+
 def _check_head(path: Path, database: sqlite3.Connection) -> None:
     (application,) = database.execute("PRAGMA application_id").fetchone()
     (tables,) = database.execute(
         "SELECT count(*) FROM sqlite_master WHERE type='table' AND name='rec'"
     ).fetchone()
-    if application != _APPLICATION_ID or not tables:
+    _check_not_empty(path)  # creation broken off and rolled back just now
+    if application != _APPLICATION_ID:
+        raise JournalError(f"{path}: is not a gratingd journal but another program's SQLite file")
+    if not tables:
         raise JournalError(
-            f"{path}: is not a gratingd journal, or one that was killed before its first record; "
-            "if it is empty it can be deleted"
+            f"{path}: holds no records; most likely it was copied or moved without '{path.name}-wal', where "
+            "they are: put that file beside it again and keep the two together"
         )
     row = database.execute("SELECT kind, body FROM rec WHERE seq=1").fetchone()
     if row is None or row[0] != "head":

@@ -4,13 +4,23 @@ from __future__ import annotations
 
 import difflib
 import importlib
+import inspect
 import sys
+import traceback
 from collections.abc import Callable, Mapping
+from pathlib import Path
 from typing import Any
 
 from drivers.bench import LoadedBench
-from drivers.errors import SettingsError
-from drivers.protocols import DriverContext
+from drivers.errors import GratingdError, SettingsError
+from drivers.protocols import Ambient, Detector, DriverContext, GratingDrive, Shutter
+
+PROTOCOLS: Mapping[str, type] = {
+    "drive": GratingDrive,
+    "detector": Detector,
+    "shutter": Shutter,
+    "ambient": Ambient,
+}
 
 
 def load_object(text: str, file: str, key: str) -> Callable[..., Any]:
@@ -74,10 +84,91 @@ def load_factories(loaded: LoadedBench) -> dict[str, Callable[..., Any]]:
 
 
 def make(factory: Callable[..., Any], options: Mapping[str, Any], context: DriverContext, file: str) -> Any:
-    """Call a factory; a mistake in its options is told with the bench file and the whole key."""
+    """Call a factory and look at what it returned.
+
+    Raises SettingsError with the bench file and the key: for a mistake in the options, for a factory that
+    fails in a way of its own, and for a device that lacks what the protocol of its role asks. DeviceError
+    passes.
+    """
+    key = f"{context.role}.factory"
     try:
-        return factory(dict(options), context)
+        made = factory(dict(options), context)
     except SettingsError as error:
         prefix = f"{context.role}.options"
         problems = [f"{prefix}.{problem}" for problem in error.problems]
         raise SettingsError(file, problems) from error
+    except GratingdError:
+        raise
+    except Exception as error:  # a lab's own factory may fail in any way
+        said = " ".join(f"{type(error).__name__}: {error}".split())
+        problem = f"{key}: the factory {_name_of(factory)} failed: {said}{_place_of(error)}"
+        raise SettingsError(file, [problem]) from error
+    if context.role in PROTOCOLS:
+        told = f"{key}: what the factory {_name_of(factory)} returned"
+        problems = [f"{told} {problem}" for problem in shortcomings(made, PROTOCOLS[context.role])]
+        if problems:
+            raise SettingsError(file, problems)
+    return made
+
+
+def shortcomings(device: object, protocol: type) -> list[str]:
+    """What a device lacks of a protocol, one phrase each: methods that are missing, not written with
+    "async def", or that cannot be called as the protocol writes them."""
+    if inspect.iscoroutine(device):
+        device.close()
+        return ["is a coroutine; write the factory with a plain 'def' and open the link in the first call"]
+    if device is None:
+        return ["is None; end the factory with 'return' and the device"]
+    kind = type(device).__name__
+    problems = []
+    for name, parameters in _methods_of(protocol).items():
+        wanted = f"{name}({_spelled(parameters)})"
+        method = getattr(device, name, None)
+        if not callable(method):
+            problems.append(f"({kind}) has no method {wanted}")
+        elif not inspect.iscoroutinefunction(method):
+            problems.append(f"({kind}) has a {name} that is not written with 'async def'")
+        elif not _can_be_called(method, parameters):
+            problems.append(f"({kind}) has a {name} that cannot be called as {wanted}")
+    return problems
+
+
+def _methods_of(protocol: type) -> dict[str, list[inspect.Parameter]]:
+    """The protocol's public methods by name, each with its parameters but self."""
+    functions = inspect.getmembers(protocol, inspect.isfunction)
+    return {
+        name: list(inspect.signature(function).parameters.values())[1:]
+        for name, function in functions
+        if not name.startswith("_")
+    }
+
+
+def _is_named(parameter: inspect.Parameter) -> bool:
+    return parameter.kind is inspect.Parameter.KEYWORD_ONLY
+
+
+def _spelled(parameters: list[inspect.Parameter]) -> str:
+    plain = [parameter.name for parameter in parameters if not _is_named(parameter)]
+    named = [parameter.name for parameter in parameters if _is_named(parameter)]
+    return ", ".join([*plain, *(["*"] if named else []), *named])
+
+
+def _can_be_called(method: Callable[..., Any], parameters: list[inspect.Parameter]) -> bool:
+    plain = [0 for parameter in parameters if not _is_named(parameter)]
+    named = {parameter.name: 0 for parameter in parameters if _is_named(parameter)}
+    try:
+        inspect.signature(method).bind(*plain, **named)
+    except TypeError:
+        return False
+    return True
+
+
+def _name_of(factory: Callable[..., Any]) -> str:
+    module, name = getattr(factory, "__module__", None), getattr(factory, "__qualname__", None)
+    return f"{module}:{name}" if module and name else repr(factory)
+
+
+def _place_of(error: Exception) -> str:
+    """Where it was raised, unless the call itself could not be made."""
+    last = traceback.extract_tb(error.__traceback__)[-1]
+    return "" if last.filename == __file__ else f" ({Path(last.filename).name}, line {last.lineno})"

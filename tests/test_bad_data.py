@@ -216,6 +216,14 @@ def with_a_question_of_another_kind(file: Path) -> None:
     edit_head(file, lambda head: head["question"].update(false_alarm="often"))
 
 
+def with_a_conclusion_without_a_look(file: Path) -> None:
+    with h5py.File(file, "r+") as run:
+        body = run["entry/events/body"]
+        conclusion = json.loads(body.asstr()[-1])
+        del conclusion["look"]
+        body[-1] = json.dumps(conclusion)
+
+
 def edit_head(file: Path, change: Callable[[dict[str, Any]], object]) -> None:
     with h5py.File(file, "r+") as run:
         body = run["entry/events/body"]
@@ -241,6 +249,7 @@ def edit_head(file: Path, change: Callable[[dict[str, Any]], object]) -> None:
         (with_a_head_without_a_plan, ["damaged"]),
         (with_a_plan_that_is_no_plan, ["damaged"]),
         (with_a_question_of_another_kind, ["damaged"]),
+        (with_a_conclusion_without_a_look, ["damaged"]),
     ],
     ids=lambda value: value.__name__.replace("_", " ") if callable(value) else "",
 )
@@ -264,7 +273,28 @@ def test_a_run_file_cut_anywhere_is_refused(whole: Path, tmp_path: Path) -> None
     refused(analyse(file, "--json"), file, ["truncated or damaged run file"])
 
 
+def test_a_run_file_by_another_name_is_still_taken_for_one(whole: Path, tmp_path: Path) -> None:
+    file = tmp_path / "run.csv"
+    file.write_bytes(whole.read_bytes()[:-1])
+    refused(analyse(file, "--json"), file, ["truncated or damaged run file"])
+
+
 # ---- journals -------------------------------------------------------------------------------------------
+
+
+def test_a_journal_copied_without_its_log_is_not_called_rubbish(tmp_path: Path) -> None:
+    """What the main file of a journal held when its head was still in the log: an identity and no table."""
+    journal = tmp_path / "run.journal"
+    database = sqlite3.connect(journal)
+    database.execute(f"PRAGMA application_id={0x47525444}")
+    database.close()
+    before = journal.read_bytes()
+    for resume in ([], ["--resume"]):
+        told = complaint(gratingd("recover", ".", *resume, cwd=tmp_path), Exit.BROKE_OFF)
+        assert "run.journal: holds no records" in told
+        assert "'run.journal-wal'" in told
+        assert "delete" not in told
+    assert journal.read_bytes() == before
 
 
 def journal_of_a_newer_format(whole: Path, folder: Path) -> Path:
@@ -284,11 +314,9 @@ def test_a_journal_of_a_newer_format(whole: Path, tmp_path: Path) -> None:
     for resume in ([], ["--resume"]):
         done = gratingd("recover", ".", "--json", *resume, cwd=tmp_path)
         assert done.returncode == Exit.BROKE_OFF
-        assert json.loads(done.stdout) == {"runs": []}
-        assert done.stderr == (
-            "gratingd: run.journal: written by a newer gratingd: format 2, this one reads 1; "
-            "use a newer gratingd\n"
-        )
+        told = "run.journal: written by a newer gratingd: format 2, this one reads 1; use a newer gratingd"
+        assert json.loads(done.stdout) == {"runs": [], "not_started": [], "problems": [told]}
+        assert done.stderr == f"gratingd: {told}\n"
     assert journal.read_bytes() == before
     assert not (tmp_path / "run.h5").exists()
 

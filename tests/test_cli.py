@@ -127,6 +127,56 @@ def test_a_file_that_says_something_else_does_not_count_as_reproduced(demo: Any,
     assert run["reproduces"].startswith(("within", "different"))
 
 
+def test_analyse_says_in_words_how_a_run_reproduces(demo: Any, tmp_path: Path) -> None:
+    runs, _ = demo
+    changed = tmp_path / "run.h5"
+    shutil.copy(runs[0]["file"], changed)
+    with h5py.File(changed, "r+") as file:
+        counts = file["entry/scan/counts"]
+        counts[...] = counts[...] + 1
+    done = gratingd(
+        "analyse", runs[1]["file"], changed, REFERENCE / "measured_pairs" / "ar_750.csv", cwd=tmp_path
+    )
+    assert done.returncode == 0, done.stderr
+    first, second = done.stdout.splitlines()[-2:]
+    assert first == f"{runs[1]['target']}: re-analysis: bit-equal to the recorded conclusion"
+    assert re.fullmatch(
+        rf"{runs[0]['target']}: re-analysis: (different from|within \S+ relative of) the recorded conclusion",
+        second,
+    )
+
+
+def test_a_run_is_known_by_what_it_holds_and_takes_no_options(demo: Any, tmp_path: Path) -> None:
+    runs, _ = demo
+    spectrum = REFERENCE / "measured_pairs" / "ar_750.csv"
+    renamed = tmp_path / "run.dat"
+    shutil.copy(runs[0]["file"], renamed)
+    done = gratingd("analyse", "--json", "run.dat", cwd=tmp_path)
+    assert [run["reproduces"] for run in json.loads(done.stdout)["runs"]] == ["bit-equal"]
+    for options, named in [
+        (["--line", "313.155"], "--line"),
+        (["--line", "313.155", "--known-line", "313.2"], "--line, --known-line"),
+        (["--target", "hg-313-pair"], "--target"),
+        (["--false-alarm", "0.001"], "--false-alarm"),  # also when it is the default that was typed
+    ]:
+        for files in ([runs[0]["file"]], ["run.dat"], [spectrum, "run.dat"]):
+            told = complaint(gratingd("analyse", *files, *options, cwd=tmp_path), Exit.MISTAKE)
+            assert "a run file (HDF5) is weighed again by the target in its own records" in told
+            assert f"without {named};" in " ".join(told.split())
+    assert list(tmp_path.iterdir()) == [renamed]
+
+
+def test_a_journal_given_to_analyse_is_sent_to_recover(demo: Any, tmp_path: Path) -> None:
+    runs, folder = demo
+    journal = folder / f"{runs[0]['run_id']}.journal"
+    shutil.copy(journal, tmp_path / "renamed.csv")
+    (tmp_path / "empty.journal").touch()
+    for file, where in [(journal, folder), ("renamed.csv", "."), ("empty.journal", ".")]:
+        told = complaint(gratingd("analyse", file, cwd=tmp_path), Exit.MISTAKE)
+        assert told.startswith(f"gratingd: {file}: is a journal, not a spectrum")
+        assert told.endswith(f"gratingd recover {where}\n")
+
+
 def test_the_demo_ends_with_its_table(tmp_path: Path) -> None:
     done = gratingd("demo", cwd=tmp_path)
     assert done.returncode == 0, done.stderr
@@ -245,7 +295,8 @@ def test_recover_makes_the_file_of_a_journal_and_then_has_nothing_to_do(tmp_path
     assert file.read_bytes() == whole
     done = gratingd("recover", "runs", cwd=tmp_path)
     assert (done.returncode, done.stdout) == (0, "nothing to recover in runs\n")
-    assert json.loads(gratingd("recover", "runs", "--json", cwd=tmp_path).stdout) == {"runs": []}
+    printed = gratingd("recover", "runs", "--json", cwd=tmp_path).stdout
+    assert json.loads(printed) == {"runs": [], "not_started": [], "problems": []}
 
 
 def test_a_journal_that_is_none_costs_recover_only_itself(tmp_path: Path) -> None:
@@ -257,7 +308,7 @@ def test_a_journal_that_is_none_costs_recover_only_itself(tmp_path: Path) -> Non
     done = gratingd("recover", "runs", "--json", cwd=tmp_path)
     assert done.returncode == Exit.BROKE_OFF
     assert json.loads(done.stdout)["runs"] == [run]
-    assert "0-empty.journal: is not a gratingd journal" in done.stderr
+    assert "0-empty.journal: is empty: gratingd was killed before its first record" in done.stderr
     assert "0-garbage.journal: damaged" in done.stderr
     assert "Traceback" not in done.stderr
 
@@ -339,6 +390,74 @@ def test_a_display_that_fails_at_every_record_is_asked_once(tmp_path: Path) -> N
     assert "no room on the screen" in told["text"]
     assert outcome.summary["stop_reason"] == "internal-error"
     assert not outcome.world.shutter.is_open
+
+
+# ---- Ctrl-C before and after ----------------------------------------------------------------------------
+
+INTERRUPTED = """
+import os, signal, sys
+from daq import __main__ as program
+import daq.cli
+moment = sys.argv.pop(1)
+class Interrupter:
+    def find_spec(self, name, path=None, target=None):
+        if name == moment:
+            sys.meta_path.remove(self)
+            os.kill(os.getpid(), signal.SIGINT)
+sys.meta_path.insert(0, Interrupter())
+program.main()
+"""
+
+
+def interrupted(moment: str, *arguments: str | Path, cwd: Path) -> subprocess.CompletedProcess[str]:
+    """The program with a SIGINT at the moment it begins to import a module."""
+    return subprocess.run(
+        [sys.executable, "-P", "-c", INTERRUPTED, moment, *map(str, arguments)],
+        cwd=cwd,
+        env=surroundings(),
+        capture_output=True,
+        text=True,
+        check=False,
+    )
+
+
+@pytest.mark.parametrize(
+    ("moment", "command"),
+    [
+        *((moment, "measure emberlight-3 hg-313-pair") for moment in ("daq.files", "pydantic", "daq.carry")),
+        *((moment, "recover .") for moment in ("numpy", "numpy.linalg", "h5py", "daq.progress", "asyncio")),
+        ("numpy", "analyse none.csv"),
+    ],
+)
+def test_ctrl_c_before_a_run_has_begun_is_one_line(moment: str, command: str, tmp_path: Path) -> None:
+    """A KeyboardInterrupt amid the import of a compiled module could come out as an error of that module."""
+    done = interrupted(moment, *command.split(), cwd=tmp_path)
+    assert done.stderr == "gratingd: stopped by Ctrl-C; no run was under way\n"
+    assert (done.returncode, done.stdout) == (Exit.STOPPED, "")
+    assert list(tmp_path.iterdir()) == []
+
+
+def test_ctrl_c_where_it_is_ignored_on_purpose_is_ignored(tmp_path: Path) -> None:
+    """As in a shell's background job: the handler found at the start is left alone."""
+    code = INTERRUPTED.replace("program.main()", "signal.signal(2, signal.SIG_IGN)\nprogram.main()")
+    file = REFERENCE / "measured_pairs" / "ar_750.csv"
+    done = subprocess.run(
+        [sys.executable, "-P", "-c", code, "numpy", "analyse", file],
+        cwd=tmp_path,
+        env=surroundings(),
+        capture_output=True,
+        text=True,
+        check=False,
+    )
+    assert done.returncode == 0, done.stderr
+    assert "ar_750" in done.stdout
+
+
+def test_ctrl_c_after_the_last_run_does_not_cost_the_table(tmp_path: Path) -> None:
+    night = night_file(tmp_path)
+    done = interrupted("daq.table", "night", "bench.toml", night, cwd=tmp_path)
+    assert done.returncode == 0, done.stderr
+    assert done.stdout.splitlines()[-1] == f"Files in {tmp_path / 'runs'}"
 
 
 # ---- help -----------------------------------------------------------------------------------------------

@@ -171,7 +171,7 @@ def damage(path: Path, statement: str) -> None:
         ("UPDATE rec SET body='[]' WHERE seq=9", r"record 9 \(point\) is not a JSON object"),
         ("UPDATE rec SET body='{\"format\":2}' WHERE seq=1", "newer gratingd: format 2, this one reads 1"),
         ("UPDATE rec SET body='{}' WHERE seq=1", "format is None"),
-        ("DROP TABLE rec", "not a gratingd journal"),
+        ("DROP TABLE rec", "holds no records"),
         ("PRAGMA application_id=7", "not a gratingd journal"),
     ],
 )
@@ -202,6 +202,98 @@ def test_other_files_are_refused_and_left_alone(tmp_path: Path) -> None:
                 action(path)
         assert (path.read_bytes() if path.is_file() else None) == before
     assert not (tmp_path / "missing").exists()
+
+
+def copied(path: Path, to: Path) -> Path:
+    """One file alone, by another process: ours may not open a journal that it is writing."""
+    subprocess.run(["cp", path, to], check=True)
+    return to
+
+
+def test_a_copy_without_its_log_holds_at_least_the_head(tmp_path: Path) -> None:
+    """SQLite's file format, section 4.1: what is committed may stand in the -wal file alone."""
+    path = tmp_path / "run.journal"
+    with Journal.create(path, HEAD, threaded=True) as journal:
+        first = copied(path, tmp_path / "first")
+        for number in range(2, 20):
+            asyncio.run(journal.durable(journal.append("point", point(number))))
+        later = copied(path, tmp_path / "later")
+        assert (tmp_path / "run.journal-wal").stat().st_size > 0, "or nothing is tested here"
+    for copy in (first, later):
+        records = list(read_journal(copy))
+        assert encode(records[0].body) == encode(HEAD)
+        with Journal.open(copy, threaded=True) as journal:
+            assert journal.append("wish", {"wish": "stop"}) == len(records) + 1
+    assert len(list(read_journal(path))) == 19
+
+
+def test_a_journal_whose_records_are_all_in_a_log_that_is_missing(tmp_path: Path) -> None:
+    """It is told where they are, and nobody is advised to delete anything."""
+    path, log = tmp_path / "run.journal", tmp_path / "run.journal-wal"
+    database = sqlite3.connect(tmp_path / "original", isolation_level=None)
+    database.execute(f"PRAGMA application_id={0x47525444}")
+    database.execute("PRAGMA journal_mode=WAL").fetchone()
+    database.execute("CREATE TABLE rec(seq INTEGER PRIMARY KEY, kind TEXT NOT NULL, body TEXT NOT NULL)")
+    database.execute("INSERT INTO rec VALUES (1, 'head', ?)", (encode(HEAD),))
+    path.write_bytes((tmp_path / "original").read_bytes())
+    whole = (tmp_path / "original-wal").read_bytes()
+    database.close()
+    assert path.stat().st_size == 4096
+    with pytest.raises(JournalError, match="holds no records") as caught:
+        list(read_journal(path))
+    assert "put that file beside it again" in str(caught.value)
+    assert f"'{log.name}'" in str(caught.value)
+    assert "delete" not in str(caught.value)
+    log.write_bytes(whole)
+    assert [record.kind for record in read_journal(path)] == ["head"]
+
+
+def test_an_empty_file_does_not_cost_the_log_beside_it(tmp_path: Path) -> None:
+    """SQLite deletes the -wal file of an empty database when it opens it."""
+    path, log = tmp_path / "run.journal", tmp_path / "run.journal-wal"
+    path.touch()
+    log.write_bytes(b"records of a night")
+    for action in (lambda p: list(read_journal(p)), lambda p: Journal.open(p, threaded=True), newest_seq):
+        with pytest.raises(JournalError, match=r"run\.journal-wal beside it may hold its records"):
+            action(path)
+    assert log.read_bytes() == b"records of a night"
+
+
+MADE_AND_KILLED = """
+import os, signal, sqlite3, sys
+from daq import journal
+class Dying(sqlite3.Connection):
+    calls = 0
+    def execute(self, *given):
+        Dying.calls += 1
+        if Dying.calls == int(sys.argv[2]):
+            os.kill(os.getpid(), signal.SIGKILL)
+        return super().execute(*given)
+plain = sqlite3.connect
+sqlite3.connect = lambda *given, **named: plain(*given, factory=Dying, **named)
+journal.Journal.create(sys.argv[1], {"format": 1}, threaded=True).close()
+"""
+
+
+def test_killed_at_any_statement_of_its_making_it_has_a_head_or_nothing(tmp_path: Path) -> None:
+    seen: list[list[str]] = []
+    statement, status = 1, -int(signal.SIGKILL)
+    while status == -signal.SIGKILL:
+        path = tmp_path / f"{statement}.journal"
+        writer = child(MADE_AND_KILLED, path, statement)
+        status = writer.wait()
+        assert writer.stdout is not None
+        writer.stdout.close()
+        try:
+            seen.append([record.kind for record in read_journal(path)])
+        except JournalError as error:
+            told = str(error).partition(": ")[2]
+            seen.append([] if told.startswith("is empty: gratingd was killed before its first") else [told])
+        statement += 1
+    assert status == 0
+    assert seen == sorted(seen), "once it is there it stays"
+    assert (seen[0], seen[-1]) == ([], ["head"])
+    assert all(kinds in ([], ["head"]) for kinds in seen)
 
 
 def test_the_closed_list_of_kinds_is_written_and_read(tmp_path: Path) -> None:

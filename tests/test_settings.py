@@ -301,13 +301,13 @@ def turret(options: dict[str, Any], context: DriverContext) -> Turret:
 
 
 def test_a_drivers_own_options_are_told_with_the_bench_file_and_the_whole_key() -> None:
-    context = DriverContext(clock=RealClock(), role="drive", seed=1, folder=".")
+    context = DriverContext(clock=RealClock(), role="world", seed=1, folder=".")
     assert make(turret, {"speed_per_s": 3}, context, "b.toml").speed_per_s == 3.0
     with pytest.raises(SettingsError) as caught:
         make(turret, {"sped_per_s": 3, "label": 4}, context, "b.toml")
     assert str(caught.value).splitlines() == [
-        'b.toml: drive.options.label = 4: must be text in quotes "..."',
-        "b.toml: drive.options.sped_per_s: unknown key 'sped_per_s'; did you mean 'speed_per_s'?",
+        'b.toml: world.options.label = 4: must be text in quotes "..."',
+        "b.toml: world.options.sped_per_s: unknown key 'sped_per_s'; did you mean 'speed_per_s'?",
     ]
 
 
