@@ -7,14 +7,12 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from analysis.digits import with_uncertainty
+from analysis.doubts import fits_poorly, further_line_nm, line_stands_out, sharper_than_stated
 from analysis.exclusion import exclusion_curve
 from analysis.fit import FitResult, inverse
 from analysis.model import FeatureModel
 from analysis.profile import ObservedWidth, observed_width
 from analysis.question import Budget, Look, Question
-
-POOR_FIT_SIGMAS = 4.753
-"""One-sided normal quantile of 1e-6."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -43,38 +41,6 @@ class Claims:
             previous.log_numerator_pair,
             previous.log_numerator_single,
         )
-
-
-def misfit_sigmas(model: FeatureModel, made: FitResult) -> float:
-    """How far chi square lies above what noise and the shape allowance let expect, in normal sigmas.
-
-    Wilson and Hilferty 1931 (PNAS 17, 684) on a chi square scaled to the mean and variance that Pearson's
-    statistic has: at m expected counts a position adds 2 + 1/m, not 2, to the variance. A shape error of the
-    allowance, fraction of the line's counts there, counts as noise here.
-    """
-    if model.sigma is None and made.mean.sum() < 5.0:
-        return 0.0
-    sigma2 = made.mean if model.sigma is None else model.sigma**2
-    light = model.line_light(made.values)
-    peak = float(light.max(initial=0.0))
-    allowed = np.zeros(sigma2.size)
-    # half of the allowance at the flanks' foot, all of it at the peak: the modes are of that kind
-    allowed[: light.size] = (model.feature.shape_allowance * np.sqrt(np.abs(light) * peak)) ** 2
-    spread = sigma2 + allowed
-    chi2 = float(np.sum((model.data - made.mean) ** 2 / spread))
-    extra = np.sum((sigma2 / spread) ** 2 / made.mean) if model.sigma is None else 0.0
-    dof = float(made.dof)
-    variance = 2.0 * dof + float(extra)
-    shape = 2.0 * dof**2 / variance
-    third = 2.0 / (9.0 * shape)
-    return float(((chi2 / dof) ** (1.0 / 3.0) - (1.0 - third)) / np.sqrt(third))
-
-
-def _fits_poorly(model: FeatureModel, made: FitResult, residual_limit: float | None) -> bool:
-    if residual_limit is None:
-        return misfit_sigmas(model, made) > POOR_FIT_SIGMAS
-    peak = float(model.line_light(made.values).max(initial=0.0))
-    return float(np.abs(model.data - made.mean).max()) > residual_limit * peak
 
 
 def separation_budget(
@@ -133,27 +99,31 @@ def describe(
     if said_pair and said_single:
         flags.append("conflict")
     where, chosen = (model_1, single) if said_single and not said_pair else (model_2, pair)
-    if _fits_poorly(where, chosen, residual_limit):
+    if fits_poorly(where, chosen, residual_limit):
         flags.append("poor-fit")
-    if not (single.converged and pair.converged):
-        flags.append("not-converged")
     sigma, gamma = chosen.value("sigma_nm"), where.value(chosen.values, "gamma_nm")
     width = observed_width(sigma_nm=sigma, gamma_nm=gamma, box_widths_nm=feature.box_widths_nm)
     fwhm, fwhm_u = width.fwhm_nm, _fwhm_u(where, chosen, width, spread)
-    if feature.reach_nm is None:  # else the width was read off the same data: nothing to compare
+    if not (said_pair or line_stands_out(model_1, single, spread)):
+        flags.append("no-line")
+    elif feature.reach_nm is None:  # else the width was read off the same data: nothing to compare
         if fwhm - 2.0 * fwhm_u > 1.15 * feature.fwhm_nm:
             flags.append("broader-than-expected")
-        if fwhm + 2.0 * fwhm_u < 0.85 * feature.fwhm_nm:
+        narrower = fwhm + 2.0 * fwhm_u < 0.85 * feature.fwhm_nm or sharper_than_stated(where, chosen)
+        if narrower and residual_limit is None:  # of a recorded spectrum no slits are stated
             flags.append("narrower-than-expected")
-    verdict = "undecided"
-    if not {"conflict", "poor-fit", "dead-time-load"} & set(flags):
-        if said_pair:
-            verdict = "pair"
-        elif said_single and "broader-than-expected" not in flags:
-            # a broad line may be two lines closer than the question asks about
-            verdict = "single"
+    further_nm = further_line_nm(model_2, pair) if said_pair or "poor-fit" in flags else None
+    if further_nm is not None:
+        flags.append("third-line")
+        place = with_uncertainty(further_nm, 0.1 * feature.fwhm_nm).split()[0]
+        reasons += (f"a further line at about {place} nm would explain the rest: give it as a known line",)
+    verdict = _verdict(flags, said_pair=said_pair, said_single=said_single)
+    rests_on = {"pair": [pair], "single": [single]}.get(verdict, [single, pair])
+    if "no-line" not in flags and not all(made.converged for made in rests_on):
+        flags.append("not-converged")
     numbers = _pair_numbers(model_2, pair, question, spread)
-    excluded = exclusion_curve(model_1, single, question, spread)
+    # without a line there is nothing that a second one could be a part of
+    excluded = () if "no-line" in flags else exclusion_curve(model_1, single, question, spread)
     base_name = where.background.names[0] if where.background is not None else ""
     goal = question.separation_uncertainty_nm
     reached = verdict == "single"
@@ -198,6 +168,15 @@ def describe(
         evidence=(),
     )
     return explain(look, question, model_1, model_2, reasons)
+
+
+def _verdict(flags: list[str], *, said_pair: bool, said_single: bool) -> str:
+    if {"conflict", "poor-fit", "dead-time-load"} & set(flags):
+        return "undecided"
+    if said_pair:
+        return "pair"
+    # a broad line may be two lines closer than the question asks about
+    return "single" if said_single and not {"no-line", "broader-than-expected"} & set(flags) else "undecided"
 
 
 @dataclass(frozen=True, slots=True)
@@ -264,14 +243,19 @@ def explain(
     sentences = {
         "conflict": "the evidence reached both bounds: line shape or light are not what they are taken for",
         "poor-fit": "neither one nor two lines describe the data",
+        "no-line": "no line stands above the background: lamp, shutter, filter, wavelength?",
         "not-converged": "a fit did not settle; look at the spectrum",
+        "overdispersed": "the scatter is over twice what is stated: line shape, neighbours or sigma are not "
+        "what they are taken for, and the false-alarm level is nominal",
         "dead-time-load": "counts come too fast for the dead-time correction: take light away",
         "broader-than-expected": "the line is over 15 % broader than the instrument and lamp let expect",
-        "narrower-than-expected": "the line is over 15 % narrower than the instrument and lamp let expect",
+        "narrower-than-expected": "the line is narrower than the stated slits and the lamp let expect: "
+        "are the slits as the bench file says?",
         "foreign-line": "a foreign line reaches into the window: give it as a known line",
         "window-cut": "only the part of the window around the main peak was used",
     }
     said += [sentences[flag] for flag in look.flags if flag in sentences]
-    if look.budget is not None and look.budget.shape_nm > look.budget.statistics_nm:
+    budget = None if "no-line" in look.flags else look.budget
+    if budget is not None and budget.shape_nm > budget.statistics_nm:
         said.append("the line shape, not the light, limits the separation: more light does not help")
     return replace(look, evidence=tuple(said))

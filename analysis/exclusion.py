@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
+from analysis.counting import FloatArray
 from analysis.fit import FitResult, inverse
 from analysis.model import FeatureModel
 from analysis.profile import line_profile
@@ -23,7 +24,6 @@ def exclusion_curve(
     max(r, 0) + 1.645 u. spread : factor on u where the data scatter more than stated.
     """
     feature = question.feature
-    values = single.values
     centre, area = single.value("centre_nm"), single.value("area")
     if not area > 0.0:
         return ()
@@ -33,33 +33,40 @@ def exclusion_curve(
         if room > near:
             places.extend(side * near * (room / near) ** (np.arange(STEPS_A_SIDE) / (STEPS_A_SIDE - 1)))
     separations = np.sort(np.array(places))
-    mean, jacobian = model.evaluate(values)
+    push, left = added_line(model, single, centre + separations)
+    curve = []
+    for place, score, information in zip(separations, push, left, strict=True):
+        limit = None
+        if information > 0.0:
+            u = spread / np.sqrt(information)
+            found = (max(score / information, 0.0) + QUANTILE_95 * u) / area
+            limit = float(found) if found < 1.0 else None
+        curve.append(Exclusion(float(place), limit))
+    return tuple(curve)
+
+
+def added_line(model: FeatureModel, made: FitResult, places_nm: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Score (M,) and information (M,) of the area of one more line at each of M places, to first order.
+
+    Everything else is free to answer; its area is score over information, the variance 1/information, and
+    score squared over information is what it takes off chi square.
+    """
+    mean, jacobian = model.evaluate(made.values)
     weight = 1.0 / mean if model.sigma is None else 1.0 / model.sigma**2
     pull = np.where(np.isfinite(model.prior_sd), 1.0 / model.prior_sd**2, 0.0)
     information = (jacobian * weight[:, None]).T @ jacobian + np.diag(pull)
     used = np.diag(information) > 0.0
     covariance = inverse(information[np.ix_(used, used)])
     profile = line_profile(
-        model.x - centre - separations[:, None],
-        sigma_nm=single.value("sigma_nm"),
-        gamma_nm=model.value(values, "gamma_nm"),
-        box_widths_nm=feature.box_widths_nm,
+        model.x - places_nm[:, None],
+        sigma_nm=made.value("sigma_nm"),
+        gamma_nm=model.value(made.values, "gamma_nm"),
+        box_widths_nm=model.feature.box_widths_nm,
     ).value
-    gain = np.ones(model.x.size)
-    for number in range(1, model.counts.groups):
-        gain[model.group == number] = single.value(f"gain_{number}")
-    lines = np.zeros((separations.size, mean.size))
-    lines[:, : model.x.size] = area * profile * gain * model.live_s(values)
+    lines = np.zeros((places_nm.size, mean.size))
+    lines[:, : model.x.size] = profile * model.gains(made.values)[model.group] * model.live_s(made.values)
     cross = (lines * weight) @ jacobian[:, used]
     own = np.sum(lines * lines * weight, axis=1) - np.sum((cross @ covariance) * cross, axis=1)
     # at the optimum the other parameters have no gradient (what a bound holds, it goes on holding)
     score = (lines * weight) @ (model.data - mean)
-    curve = []
-    for place, left, push in zip(separations, own, score, strict=True):
-        limit = None
-        if left > 0.0:
-            u = spread / np.sqrt(left)
-            found = max(push / left, 0.0) + QUANTILE_95 * u
-            limit = float(found) if found < 1.0 else None
-        curve.append(Exclusion(float(place), limit))
-    return tuple(curve)
+    return score, own

@@ -98,7 +98,7 @@ def fit(
     lower: FloatArray | None = None,
     upper: FloatArray | None = None,
     tolerance: float = 1e-9,
-    iterations: int = 60,
+    iterations: int = 120,
 ) -> FitResult:
     """Best parameters from `start` (P,). ValueError if it has another length or is not finite.
 

@@ -22,6 +22,10 @@ from analysis.question import Feature
 
 KNOWN_SHIFT_FWHM = 0.02
 """Standard deviation of the known lines' common shift against the main line, in expected FWHM."""
+GAIN_SD = 0.1
+"""Standard deviation of a dither group's gain about 1: lamps drift 0.1 to 1 % and more while they warm up
+(common practice). It holds a group that has seen no line yet; one that has is known to a few per cent and
+better, and there the prior moves it by less than its uncertainty."""
 _TINY = 1e-12
 
 
@@ -70,7 +74,8 @@ class FeatureModel:
 
     names, lower, upper, prior_mean, prior_sd : (P,) the parameters, their bounds, their Gaussian priors
     (infinite sd: none). with_dark: fit the closed-shutter counts jointly, as a last row of their own.
-    with_modes_bounded: shape modes are free within two allowances instead of drawn to zero by their prior.
+    with_modes_bounded: shape modes are free within two allowances instead of drawn to zero by their prior,
+    and gains have no prior either: a rival of a claim may be anything that is possible.
     """
 
     counts: Counts
@@ -144,7 +149,7 @@ class FeatureModel:
         if self.has_dark:
             add("dark_per_s", 0.0)
         for number in range(1, counts.groups):
-            add(f"gain_{number}", 0.0)
+            add(f"gain_{number}", 0.0, mean=1.0, sd=np.inf if self.with_modes_bounded else GAIN_SD)
         if counts.sigma is None and counts.dead_time_s > 0.0 and counts.dead_time_u_s > 0.0:
             tau, u = counts.dead_time_s, counts.dead_time_u_s
             if self.with_modes_bounded:
@@ -182,7 +187,7 @@ class FeatureModel:
     def rate(self, values: FloatArray) -> FloatArray:
         """(N,) expected true rate, 1/s, at the visited positions, without Jacobian."""
         light, _ = self._light(values, derivatives=False)
-        gain = self._gains(values)[self.group]
+        gain = self.gains(values)[self.group]
         made: FloatArray = np.maximum(gain * light + self.value(values, "dark_per_s"), _TINY)
         return made
 
@@ -196,7 +201,7 @@ class FeatureModel:
     def evaluate(self, values: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Mean (N,) and Jacobian (N, P); with dark one more row."""
         light, d_light = self._light(values, derivatives=True)
-        gain = self._gains(values)[self.group]
+        gain = self.gains(values)[self.group]
         live = self.live_s(values)
         rate = gain * light + self.value(values, "dark_per_s")
         if self.sigma is None:
@@ -227,10 +232,11 @@ class FeatureModel:
         light, _ = self._light(values, derivatives=False)
         assert self.background is not None
         base, _ = self.background.evaluate(self.x, self._background_values(values))
-        made: FloatArray = self._gains(values)[self.group] * (light - base) * self.live_s(values)
+        made: FloatArray = self.gains(values)[self.group] * (light - base) * self.live_s(values)
         return made
 
-    def _gains(self, values: FloatArray) -> FloatArray:
+    def gains(self, values: FloatArray) -> FloatArray:
+        """(G,) brightness of the dither groups against the first."""
         first = self.index.get("gain_1")
         if first is None:
             return np.ones(1)

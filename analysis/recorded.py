@@ -23,6 +23,10 @@ RECORDED_ALLOWANCE = 0.02
 SLIT_SHARE = 0.7
 """Slit image of an unknown instrument, fraction of the FWHM: slits are opened until they begin to widen the
 line (common practice). A pure Voigt shape instead leaves 3 % of the peak on real lamp lines, this one 1 %."""
+OVERDISPERSED = 2.0
+"""Scatter, in units of the stated one, above which it is flagged. It forbids no claim: of 48 single lines and
+20 pairs of a real lamp one single is called a pair (scatter 4.8), but 14 of the 15 pairs found and 24 of the
+46 singles scatter more than twice as stated too."""
 FOREIGN_PEAK = 0.01
 CLEAR_PEAK = 0.1
 
@@ -108,6 +112,8 @@ def weigh_once(counts: Counts, question: Question) -> Look:
         log_numerator_single=0.0,
     )
     reasons: list[str] = []
+    if scatter > OVERDISPERSED**2:
+        flags.append("overdispersed")
     if scatter > 1.0:
         reasons.append(f"readings scatter {np.sqrt(scatter):.2g} times as much as stated: u widened")
     if e_pair == 0.0 and claims.max_log_e_single < claims.bound_single:

@@ -213,10 +213,35 @@ def test_the_plot_holds_the_summed_good_light(tmp_path: Path) -> None:
         assert data["model_single"][0] == 3.0
         assert np.allclose(data["residuals"][:], data["rate"][:] - 5.0)
         assert file["entry/analysis/look/pair/covariance"][:].tolist() == [[1.0, 0.5], [0.5, 2.0]]
-        assert np.isnan(file["entry/analysis/look/exclusion/ratio_limit"][0])
         assert file["entry/analysis/look/separation_nm"].attrs["units"] == "nm"
         assert file["entry/analysis/looks/log_e_pair"][:].tolist() == [7.5]
         assert file["entry/config/bench"].asstr()[()] == BENCH
+
+
+@pytest.mark.parametrize("verdict", ["single", "undecided", "pair"])
+def test_the_exclusion_curve_says_what_it_is(tmp_path: Path, verdict: str) -> None:
+    rows = records(26)
+    kind, body = rows[-1]
+    rows[-1] = (kind, body | {"look": LOOK | {"verdict": verdict, "number": 3}})
+    export(journal_of(tmp_path / "run.journal", rows), tmp_path / "run.h5", curve=flat)
+    with h5py.File(tmp_path / "run.h5") as file:
+        look = file["entry/analysis/look"]
+        assert ("exclusion" in look) == (verdict != "pair")
+        if verdict == "pair":
+            return
+        curve = look["exclusion"]
+        assert (curve.attrs["confidence"], curve.attrs["look"]) == (0.95, 3)
+        assert "one-sided" in curve.attrs["bound"]
+        assert "fixed-sample" in curve.attrs["method"]
+        assert "repeated looks" in curve.attrs["method"]
+        assert curve["separation_nm"][:].tolist() == [0.1, 0.2]
+        assert curve["separation_nm"].attrs["units"] == "nm"
+        limit = curve["ratio_limit"]
+        assert np.isnan(limit[0])
+        assert limit[1] == 0.1
+        assert limit.attrs["units"] == "1"
+        assert "NaN: nothing below 1 is excluded" in limit.attrs["long_name"]
+    assert nxcheck(tmp_path / "run.h5")[:2] == (0, 0)
 
 
 def test_the_published_dead_time_example(tmp_path: Path) -> None:

@@ -10,7 +10,7 @@ import pytest
 
 from analysis.counting import Counts, FloatArray
 from analysis.fit import fit
-from analysis.model import FeatureModel, vector
+from analysis.model import GAIN_SD, FeatureModel, vector
 from analysis.question import Feature
 from analysis.starts import fit_pair, fit_single
 
@@ -164,7 +164,9 @@ def test_jacobian_is_that_of_the_mean(lines: int, shape: str, widths: str) -> No
 
 
 def test_against_an_independent_minimiser() -> None:
-    """The same Poisson likelihood, written out again, minimised by iminuit: values and HESSE errors."""
+    """The same Poisson likelihood, written out again, minimised by iminuit: values and HESSE errors.
+
+    The prior of the gains is part of it."""
     from iminuit import Minuit
 
     seed = 7
@@ -181,7 +183,8 @@ def test_against_an_independent_minimiser() -> None:
         light = bell + bl * (1.0 - share) + br * share
         mean = 2.0 * (np.array([1.0, gain1, gain2])[group] * light + d)
         dark = 40.0 * d
-        return float(np.sum(mean - n * np.log(mean)) + dark - counts.dark_counts * np.log(dark))
+        held = 0.5 * ((gain1 - 1.0) ** 2 + (gain2 - 1.0) ** 2) / GAIN_SD**2
+        return float(np.sum(mean - n * np.log(mean)) + dark - counts.dark_counts * np.log(dark) + held)
 
     other = Minuit(minus_log, a=5.0, c=313.155, s=0.008, bl=5.0, br=9.0, d=5.0, gain1=1.0, gain2=1.0)
     other.errordef = Minuit.LIKELIHOOD
@@ -199,6 +202,28 @@ def test_against_an_independent_minimiser() -> None:
         assert abs(made.value(ours) - other.values[theirs]) < 0.01 * u, (ours, seed)
         # HESSE is the observed information, the fit's the expected one: they differ by chance
         assert made.deviation(ours) == pytest.approx(u, rel=0.1), (ours, seed)
+
+
+def test_gains_are_those_of_the_data_where_data_tell() -> None:
+    """Gains of 0.7 and 1.2, far beyond the prior's 0.1: found within their uncertainty all the same, and a
+    group that has seen only the window's foot keeps to the prior."""
+    for seed in range(20, 26):
+        rng = np.random.Generator(np.random.Philox(key=seed))
+        x = 313.155 + np.linspace(-0.07, 0.07, 90)
+        group = np.arange(90, dtype=np.int64) % 3
+        light = 3000.0 * np.exp(-0.5 * ((x - 313.156) / 0.008) ** 2) + 6.0
+        counts = rng.poisson(np.array([1.0, 0.7, 1.2])[group] * light).astype(np.float64)
+        plain = Feature(313.155, 0.0188, (0.0, 0.0), 0.0188, shape="gaussian", shape_allowance=0.0)
+        made = fit_single(FeatureModel(Counts(x, counts, np.ones(90), group), plain, 1))
+        for name, true in (("gain_1", 0.7), ("gain_2", 1.2)):
+            assert made.deviation(name) < 0.02, seed
+            assert abs(made.value(name) - true) < 3.5 * made.deviation(name), (name, seed)
+        gate = np.where((group < 2) | (x < 313.10), 1.0, 0.0)
+        begun = Counts(x, np.where(gate > 0.0, counts, 0.0), gate, group)
+        foot = fit_single(FeatureModel(begun, plain, 1))
+        assert foot.converged
+        assert foot.deviation("gain_2") == pytest.approx(GAIN_SD, rel=0.1), seed
+        assert abs(foot.value("gain_2") - 1.0) < GAIN_SD, seed
 
 
 def test_line_centre_reaches_the_cramer_rao_bound() -> None:

@@ -61,6 +61,12 @@ def test_cadmium_needs_its_third_line() -> None:
     assert abs(with_it.separation_nm - 0.2366) < 2.0 * with_it.separation_u_nm
     assert without.separation_nm > 0.25
     assert with_it.single.value("known_1_area") > 0.0
+    # and the fit without it says that it misses one, within half a FWHM (0.16 nm) of where it stands
+    assert "third-line" not in with_it.flags
+    assert "third-line" in without.flags
+    told = next(sentence for sentence in without.evidence if sentence.startswith("a further line"))
+    assert abs(float(told.split("about ")[1].split(" nm")[0]) - 361.548) < 0.5 * guess.fwhm_nm
+    assert "narrower-than-expected" not in with_it.flags  # no slits are stated
 
 
 @pytest.mark.slow
@@ -111,6 +117,23 @@ def test_poisson_counts_without_sigma() -> None:
     assert answer.verdict == "pair"
     assert answer.separation_nm == pytest.approx(9e-3, rel=0.03)
     assert answer.ratio == pytest.approx(0.6, rel=0.08)
+
+
+def test_more_scatter_than_stated_is_flagged() -> None:
+    """Poisson counts, once with their own standard deviation and once with a quarter of it."""
+    counts = made_up(7, 0.6, 9.0)
+    own = np.sqrt(np.maximum(counts.counts, 1.0))
+    honest, understated = (
+        weigh_once(replace(counts, sigma=sigma), ask(guess_feature(counts, shape_allowance=0.01)))
+        for sigma in (own, own / 4.0)
+    )
+    assert "overdispersed" not in honest.flags
+    assert "overdispersed" in understated.flags
+    assert any("the false-alarm level is nominal" in sentence for sentence in understated.evidence)
+    assert understated.max_log_e_pair > understated.bound_pair
+    assert honest.separation_u_nm is not None
+    # chi square puts the understated deviation right again
+    assert understated.separation_u_nm == pytest.approx(honest.separation_u_nm, rel=0.35)
 
 
 def test_counts_may_be_slightly_negative() -> None:

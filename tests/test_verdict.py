@@ -7,11 +7,14 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
-from emulated import CENTRE_NM, FWHM_NM, Lamp, night, question
+from emulated import CENTRE_NM, FWHM_NM, Lamp, line, night, question
 
+from analysis.answer import Claims, describe
 from analysis.counting import Counts
 from analysis.evidence import between
+from analysis.model import FeatureModel
 from analysis.question import Evidence, Feature, Look, Question, from_json, to_json
+from analysis.starts import fit_pair, fit_single
 from analysis.verdict import look
 
 
@@ -119,6 +122,12 @@ def test_three_lines_are_neither_one_nor_two() -> None:
     assert "poor-fit" in last.flags
     assert "neither one nor two lines describe the data" in last.evidence
     assert not last.goal_reached
+    assert "third-line" in last.flags
+    told = next(sentence for sentence in last.evidence if sentence.startswith("a further line at about"))
+    found = float(told.split("about ")[1].split(" nm")[0])
+    # which of the three the pair leaves over is open
+    there = [lamp.centre_nm + place * FWHM_NM for place in (0.0, 1.6, -2.3)]
+    assert min(abs(found - place) for place in there) < 0.3 * FWHM_NM, (found, there)
 
 
 def test_a_goal_of_uncertainty_keeps_the_run_going() -> None:
@@ -227,6 +236,98 @@ def test_darkness_is_undecided() -> None:
     json.dumps(to_json(answer), allow_nan=False)
 
 
+def test_without_a_line_there_is_nothing_to_be_single() -> None:
+    """The lamp is off: said so at every look, and a claim of one line, reached by chance, is not made."""
+    for seed in range(500, 503):
+        lamp, asked = Lamp(seed, peak_per_s=0.0), question()
+        answers = night(lamp, asked, looks=(2, 4, 8, 16))
+        for answer in answers:
+            assert answer.verdict == "undecided", seed
+            assert answer.flags == ("no-line",), seed
+            assert any("lamp, shutter, filter" in sentence for sentence in answer.evidence)
+            assert answer.exclusion == ()
+        before, counted = replace(answers[-1], max_log_e_single=9.0), lamp.counts()
+        lamp.sweep()
+        chance = look(Evidence(lamp.counts(), counted, counted), asked, before)
+        assert chance.max_log_e_single > chance.bound_single
+        assert chance.verdict == "undecided", seed
+        assert "no-line" in chance.flags
+
+
+def test_a_known_line_alone_is_no_line() -> None:
+    """The main line is out, its known neighbour shines: there is still nothing to be settled."""
+    lamp = Lamp(54)
+    bare = 10.0 + 150.0 * line(lamp.wavelength_nm - CENTRE_NM + 2.3 * FWHM_NM, 0.003)
+    lamp.rate_per_s = bare
+    for _ in range(8):
+        lamp.sweep()
+    feature = replace(question().feature, known_lines_nm=(CENTRE_NM - 2.3 * FWHM_NM,))
+    answer = look(Evidence(lamp.counts()), replace(question(), feature=feature), None)
+    assert "no-line" in answer.flags
+    assert "no-line" not in look(Evidence(lamp.counts()), question(), None).flags
+
+
+def test_both_claims_together_are_a_conflict() -> None:
+    lamp, asked = Lamp(55), question()
+    for _ in range(4):
+        lamp.sweep()
+    first = lamp.counts()
+    one = look(Evidence(first), asked, None)
+    lamp.sweep()
+    both = replace(one, max_log_e_pair=one.bound_pair, max_log_e_single=one.bound_single)
+    two = look(Evidence(lamp.counts(), first, first), asked, both)
+    assert two.verdict == "undecided"
+    assert "conflict" in two.flags
+    assert not two.goal_reached
+    for name in ("max_log_e_pair", "max_log_e_single"):
+        short = replace(both, **{name: 0.0})
+        assert "conflict" not in look(Evidence(lamp.counts(), first, first), asked, short).flags
+
+
+@pytest.mark.parametrize("separation_fwhm", [0.0, 1.5])
+def test_a_sweep_that_just_began_unsettles_nothing(separation_fwhm: float) -> None:
+    """Six positions of the second comb, all at the window's foot, cannot tell its gain: the prior does."""
+    for seed in range(520, 526):
+        lamp = Lamp(seed, separation_fwhm=separation_fwhm, ratio=0.7 if separation_fwhm else 0.0)
+        for _ in range(8):
+            lamp.sweep()
+        counts = lamp.counts()
+        begun = np.flatnonzero(counts.group == 1)[:6]
+        seen = (counts.group == 0) | np.isin(np.arange(counts.group.size), begun)
+        now = replace(
+            counts, counts=np.where(seen, counts.counts, 0.0), gate_s=np.where(seen, counts.gate_s, 0.0)
+        )
+        answer = look(Evidence(now), question(), None)
+        for made in (answer.single, answer.pair):
+            assert abs(made.value("gain_1") - 1.0) < 0.3, seed
+        assert answer.pair.converged, seed
+
+
+def test_only_the_fit_that_the_verdict_rests_on_must_settle() -> None:
+    lamp = Lamp(56, separation_fwhm=1.3, ratio=0.6)
+    for _ in range(6):
+        lamp.sweep()
+    models = [FeatureModel(lamp.counts(), question().feature, lines) for lines in (1, 2)]
+    single = fit_single(models[0])
+    pair = fit_pair(models[1], single)
+
+    def flags(log_e_pair: float, **unsettled: bool) -> tuple[str, ...]:
+        return describe(
+            number=2,
+            question=question(),
+            claims=Claims(log_e_pair, 0.0, 6.9, 3.0, log_e_pair, 0.0, 0.0, 0.0),
+            model_1=models[0],
+            model_2=models[1],
+            single=replace(single, converged="single" not in unsettled),
+            pair=replace(pair, converged="pair" not in unsettled),
+            flags=[],
+        ).flags
+
+    assert flags(20.0) == flags(20.0, single=True) == ()
+    assert flags(20.0, pair=True) == ("not-converged",)
+    assert flags(0.0, single=True) == flags(0.0, pair=True) == ("not-converged",)
+
+
 def test_too_much_light_for_the_dead_time_is_refused() -> None:
     lamp = Lamp(51, separation_fwhm=1.3, ratio=0.7)
     for _ in range(4):
@@ -279,3 +380,17 @@ def test_slits_not_as_stated_make_no_pair(told: float) -> None:
     answers = night(lamp, replace(asked, feature=feature), looks=(2, 4, 8, 16, 32), stop=False)
     assert "pair" not in [answer.verdict for answer in answers]
     assert "poor-fit" in answers[-1].flags
+
+
+@pytest.mark.parametrize("separation_fwhm", [0.0, 1.5])
+@pytest.mark.parametrize("told", [1.0, 1.25, 1.4])
+def test_slits_narrower_than_stated_are_noticed(told: float, separation_fwhm: float) -> None:
+    """The fitted width cannot fall below the stated slits', so the fit is asked whether it would like to."""
+    for seed in range(540, 544):
+        lamp = Lamp(seed, separation_fwhm=separation_fwhm, ratio=0.7 if separation_fwhm else 0.0)
+        for _ in range(12):
+            lamp.sweep()
+        boxes, fwhm = (told * 0.018, told * 0.018), float(np.hypot(told * 0.018, 0.004))
+        feature = replace(question().feature, box_widths_nm=boxes, fwhm_nm=fwhm)
+        answer = look(Evidence(lamp.counts()), replace(question(), feature=feature), None)
+        assert ("narrower-than-expected" in answer.flags) == (told > 1.0), seed
