@@ -68,6 +68,7 @@ def fits_poorly(model: FeatureModel, made: FitResult, residual_limit: float | No
 def line_stands_out(model: FeatureModel, single: FitResult, spread: float) -> bool:
     """Whether the single line explains the data clearly better than background and known lines alone.
 
+    Its area against the area's uncertainty does not tell: that grows with the freedom of the width.
     spread : scatter of the readings, in units of the stated one.
     """
     if not single.value("area") > 0.0:

@@ -44,6 +44,7 @@ def test_measured_pairs(name: str, published_pm: float) -> None:
     assert answer.separation_u_nm is not None
     assert abs(1e3 * answer.separation_nm - published_pm) < 3.0 * 1e3 * answer.separation_u_nm
     assert answer.separation_u_nm < 0.005 * answer.separation_nm
+    assert "third-line" not in answer.flags  # no flank is taken for one
     assert from_json(Look, json.loads(json.dumps(to_json(answer), allow_nan=False))) == answer
 
 

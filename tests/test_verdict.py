@@ -254,6 +254,20 @@ def test_without_a_line_there_is_nothing_to_be_single() -> None:
         assert "no-line" in chance.flags
 
 
+def test_a_faint_line_is_a_line() -> None:
+    """Twice the background: its area, free with its width, is known to a third or so, and yet the
+    line is there beyond doubt."""
+    for seed in range(510, 516):
+        lamp = Lamp(seed, peak_per_s=20.0)
+        for _ in range(4):
+            lamp.sweep()
+        answer = look(Evidence(lamp.counts()), question(), None)
+        place = answer.single.names.index("area")
+        area_u = np.sqrt(answer.single.covariance[place][place])
+        assert answer.single.values[place] < 5.0 * area_u, seed
+        assert "no-line" not in answer.flags, seed
+
+
 def test_a_known_line_alone_is_no_line() -> None:
     """The main line is out, its known neighbour shines: there is still nothing to be settled."""
     lamp = Lamp(54)
