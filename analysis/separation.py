@@ -41,7 +41,7 @@ def ghz_from_per_cm(per_cm: float) -> float:
 class Separation:
     """The separation of two lines in every unit, each with its standard uncertainty `u_`.
 
-    `air_pm` and `u_air_pm` are None below 180 nm, where there is no such thing as an air wavelength.
+    `air_pm` and `u_air_pm` are None below 180 nm, where air wavelengths are not in use.
     """
 
     air_pm: float | None

@@ -37,6 +37,31 @@ separation_uncertainty_pm = 0.6
 time_s = 400.0
 """
 
+# The demo bench with its slow parts made quick, for runs in real time.
+FAST_BENCH = [
+    ("speed_steps_per_s = 20000.0", "speed_steps_per_s = 20000000.0"),
+    ("acceleration_steps_per_s2 = 80000.0", "acceleration_steps_per_s2 = 1e10"),
+    ("home_s = 4.0", "home_s = 0.01"),
+    ("settle_s = 0.05", "settle_s = 0.001"),
+]
+
+
+def hasty_target(*, separation_uncertainty_pm: float, time_s: float) -> str:
+    """A target of 4 ms dwells: hundreds of points in a second of real time."""
+    return f"""
+format = 1
+name = "Hasty pair"
+wavelength_air_nm = 313.155
+[window]
+half_width_fwhm = 2.5
+[sweep]
+dwell_s = 0.004
+[goal]
+separation_uncertainty_pm = {separation_uncertainty_pm}
+[limits]
+time_s = {time_s}
+"""
+
 
 @dataclass(frozen=True)
 class Outcome:

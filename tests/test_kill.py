@@ -12,7 +12,7 @@ import threading
 from pathlib import Path
 
 import pytest
-from cellar import bench_file, target_file
+from cellar import FAST_BENCH, bench_file, hasty_target, target_file
 
 from daq.journal import read_journal
 from daq.records import Kind
@@ -22,25 +22,7 @@ SEED = 20310211
 MOMENTS = 50
 LONGEST_S = 2.5
 
-FAST_BENCH = [
-    ("speed_steps_per_s = 20000.0", "speed_steps_per_s = 20000000.0"),
-    ("acceleration_steps_per_s2 = 80000.0", "acceleration_steps_per_s2 = 1e10"),
-    ("home_s = 4.0", "home_s = 0.01"),
-    ("settle_s = 0.05", "settle_s = 0.001"),
-]
-FAST_TARGET = """
-format = 1
-name = "Hasty pair"
-wavelength_air_nm = 313.155
-[window]
-half_width_fwhm = 2.5
-[sweep]
-dwell_s = 0.004
-[goal]
-separation_uncertainty_pm = 0.001
-[limits]
-time_s = 3.5
-"""
+FAST_TARGET = hasty_target(separation_uncertainty_pm=0.001, time_s=3.5)
 
 
 def acknowledged_until_killed(folder: Path, after_s: float) -> list[int]:

@@ -19,7 +19,7 @@ from typing import Any
 
 import h5py
 import pytest
-from cellar import bench_file, target_file
+from cellar import FAST_BENCH, bench_file, hasty_target, target_file
 from commandline import start
 
 from daq.cli import Exit
@@ -27,26 +27,7 @@ from daq.journal import read_journal
 from daq.records import Kind
 from daq.runfile import read_run
 
-# The demo bench with its slow parts made quick, and a goal it cannot reach in the time given.
-FAST_BENCH = [
-    ("speed_steps_per_s = 20000.0", "speed_steps_per_s = 20000000.0"),
-    ("acceleration_steps_per_s2 = 80000.0", "acceleration_steps_per_s2 = 1e10"),
-    ("home_s = 4.0", "home_s = 0.01"),
-    ("settle_s = 0.05", "settle_s = 0.001"),
-]
-TARGET = """
-format = 1
-name = "Hasty pair"
-wavelength_air_nm = 313.155
-[window]
-half_width_fwhm = 2.5
-[sweep]
-dwell_s = 0.004
-[goal]
-separation_uncertainty_pm = 0.05
-[limits]
-time_s = 60.0
-"""
+TARGET = hasty_target(separation_uncertainty_pm=0.05, time_s=60.0)
 
 
 @contextlib.contextmanager
