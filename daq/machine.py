@@ -153,6 +153,7 @@ class Machine:
         self.looks: list[dict[str, Any]] = []
         self.conclusion: dict[str, Any] | None = None
         self.last_safe: dict[str, Any] | None = None
+        self.cause: str | None = None
         self.bench_ns = 0
         self._session_base_ns = 0
         self._devices = False
@@ -272,6 +273,8 @@ class Machine:
             self._faults_in_a_row += 1
             self._prepared = False
             return
+        if self.stop is None:
+            self.cause = f"{body['device']}: {body['text']}"
         self._stop_for(_FAULT_REASONS.get(body["error"], StopReason.FAULT))
 
     def _safe_record(self, body: Body) -> None:

@@ -188,7 +188,8 @@ def _window(
     drive = loaded.bench.drive
     if lowest < drive.lowest_steps or highest > drive.highest_steps:
         raise refuse(
-            f"window: needs the drive at {lowest} to {highest} steps, the bench allows "
+            f"window: around {where_nm:.6g} nm it needs the drive at {lowest} to {highest} steps, "
+            f"the bench allows "
             f"{drive.lowest_steps} to {drive.highest_steps}"
         )
     if lowest - drive.backlash_steps < drive.lowest_steps:

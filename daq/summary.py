@@ -26,6 +26,7 @@ def conclusion(head: Body, machine: Machine, look: dict[str, Any] | None) -> dic
             "target": head["target"]["name"],
             **verdict_fields(look),
             **({} if look is not None else _no_look(machine)),
+            "cause": machine.cause,
             "stop_reason": machine.stop,
             "bench_time_s": machine.bench_ns / 1e9,
             "light_s": machine.light_ns / 1e9,

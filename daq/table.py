@@ -36,7 +36,8 @@ def runs_table(runs: Sequence[Mapping[str, Any]]) -> str:
     console = Console(file=stream, width=WIDTH, color_system=None, highlight=False, markup=False)
     console.print(table)
     for run in runs:
-        for sentence in run["evidence"]:
+        cause = run.get("cause")
+        for sentence in [*([f"stopped by a fault: {cause}"] if cause else []), *run["evidence"]]:
             console.print(f"{run['target']}: {sentence}", soft_wrap=False)
     media = sorted({run["medium"] for run in runs})
     console.print(f"Separations in {' and '.join(media)}; ± is one standard uncertainty." if media else "")

@@ -81,6 +81,7 @@ def test_an_exception_from_any_driver_call_ends_in_a_safe_stop(
     assert outcome.summary["stop_reason"] == reason
     (told,) = outcome.of_kind(Kind.FAULT)
     assert call in told["text"]
+    assert outcome.summary["cause"] == f"{told['device']}: {told['text']}"
     assert [record.kind for record in outcome.records[-2:]] == [Kind.SAFE, Kind.CONCLUSION]
     assert not outcome.world.shutter.is_open
 
