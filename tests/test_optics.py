@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import math
 from dataclasses import replace
 
@@ -13,7 +14,17 @@ from numpy.typing import NDArray
 from scipy.optimize import brentq
 from scipy.special import voigt_profile
 
-from analysis.optics import SINC2_FWHM, Mount, PlaneMount, TableMount, expected_fwhm_nm
+from analysis.optics import (
+    SINC2_FWHM,
+    ConcaveMount,
+    LittrowMount,
+    Mount,
+    PlaneMount,
+    TableMount,
+    expected_fwhm_nm,
+    mount_from_json,
+    mount_to_json,
+)
 
 PLANE = PlaneMount(
     groove_density_per_mm=1200.0,
@@ -27,6 +38,31 @@ PLANE = PlaneMount(
     zero_order_steps=250.0,
 )
 TABLE = TableMount((575.0, 575.15, 575.31, 575.46, 575.62, 575.77), "vacuum")
+LITTROW = LittrowMount(
+    groove_density_per_mm=1200.0,
+    ruled_width_mm=96.0,
+    focal_length_mm=870.0,
+    off_plane_angle_deg=4.0,
+    order=1,
+    entrance_slit_um=20.0,
+    exit_slit_um=30.0,
+    steps_per_radian=1.1e6,
+)
+CONCAVE = ConcaveMount(
+    groove_density_per_mm=568.43,
+    ruled_width_mm=50.0,
+    radius_mm=1000.0,
+    included_angle_deg=30.0,
+    focused_nm=589.0,
+    focused_order=1,
+    order=1,
+    entrance_slit_um=20.0,
+    exit_slit_um=20.0,
+    drive="sine-bar",
+    steps_per_unit_sine=8.0e5,
+)
+SINE_BAR = replace(PLANE, drive="sine-bar", steps_per_radian=0.0, steps_per_unit_sine=8.0e5)
+MOUNTS: list[PlaneMount | LittrowMount | ConcaveMount] = [PLANE, SINE_BAR, LITTROW, CONCAVE]
 
 
 def test_sodium_d_lines_in_second_order_need_500_grooves() -> None:
@@ -239,9 +275,115 @@ def test_a_table_needs_a_medium() -> None:
         TableMount((575.0, 576.0), "glass")
 
 
-def test_both_mounts_are_mounts() -> None:
-    mounts: list[Mount] = [PLANE, TABLE]
-    assert [mount.medium for mount in mounts] == ["air", "vacuum"]
+def test_all_mounts_are_mounts() -> None:
+    mounts: list[Mount] = [PLANE, LITTROW, CONCAVE, TABLE]
+    assert [mount.medium for mount in mounts] == ["air", "air", "air", "vacuum"]
+    assert [mount.order for mount in mounts] == [1, 1, 1, 1]
+    assert [mount.blur_nm(575.2) > 0.0 for mount in mounts] == [False, False, True, False]
+
+
+# --- Littrow, sine bar, JSON --------------------------------------------------------------------------------
+
+
+def test_littrow_sends_the_light_back_the_way_it_came() -> None:
+    """Textbook: 2 d sin phi = m lambda; 1200 per mm blazed at 500 nm has its facets at 17 deg 27'
+    (catalogues)."""
+    flat = replace(LITTROW, off_plane_angle_deg=0.0)
+    alpha, beta = flat.angles_rad(500.0)
+    assert alpha == beta
+    assert math.degrees(alpha) == pytest.approx(17.0 + 27.5 / 60.0, abs=0.01)
+
+
+def test_off_plane_littrow_by_vectors() -> None:
+    """Both directions stand gamma above or below the plane of dispersion: P = d t.(u + v), t across the
+    grooves."""
+    gamma = math.radians(4.0)
+    for wavelength_nm in (250.0, 546.074, 1200.0):
+        phi, _ = LITTROW.angles_rad(wavelength_nm)
+        u = np.array([math.cos(gamma) * math.sin(phi), math.sin(gamma), math.cos(gamma) * math.cos(phi)])
+        v = u * [1.0, -1.0, 1.0]
+        assert LITTROW.groove_spacing_nm * (u + v)[0] == pytest.approx(wavelength_nm, rel=1e-12)
+        # a slit edge w/2 aside tilts its ray in the plane by w/(2 f)
+        aside = np.array([math.cos(phi), 0.0, -math.sin(phi)]) * 0.5 * 0.030 / 870.0
+        ends = [(v + side) / np.linalg.norm(v + side) for side in (aside, -aside)]
+        wide_nm = LITTROW.groove_spacing_nm * float((ends[0] - ends[1])[0])
+        assert LITTROW.bandpass_nm(wavelength_nm)[1] == pytest.approx(wide_nm, rel=1e-8)
+
+
+@given(wavelength_nm=st.floats(200.0, 1100.0), number=st.integers(0, 3), order=st.sampled_from([1, -1]))
+def test_every_mount_there_and_back_again(wavelength_nm: float, number: int, order: int) -> None:
+    mount = replace(MOUNTS[number], order=order)
+    steps = mount.steps(wavelength_nm)
+    assert float(mount.wavelength_nm(steps)) == pytest.approx(wavelength_nm, rel=1e-9)
+    below, above = mount.wavelength_nm([steps - 50.0, steps + 50.0])
+    assert mount.dispersion_nm_per_step(steps) == pytest.approx((above - below) / 100.0, rel=1e-6)
+
+
+def test_on_a_sine_bar_the_wavelength_goes_evenly() -> None:
+    """What sine bars are built for (common practice): the same number of nm a step everywhere."""
+    wavelengths = SINE_BAR.wavelength_nm(250.0 + np.arange(0.0, 500_000.0, 50_000.0))
+    np.testing.assert_allclose(np.diff(wavelengths), wavelengths[1], rtol=1e-11)
+    assert wavelengths[1] == pytest.approx(SINE_BAR.nm_per_sine / 16.0, rel=1e-12)
+    # the same rotation as with the rotary drive, so the same reach
+    assert SINE_BAR.steps(546.074) != pytest.approx(PLANE.steps(546.074), rel=1e-3)
+    assert SINE_BAR.angles_rad(546.074) == PLANE.angles_rad(546.074)
+    with pytest.raises(ValueError, match=r"turns the grating too far.*allowed: less than 785302 steps"):
+        SINE_BAR.wavelength_nm(790_000.0)
+
+
+def test_anamorphism_is_how_the_two_slit_images_compare() -> None:
+    """cos alpha/cos beta (textbook): equal slits, equal arms, the entrance slit's box over the exit
+    slit's."""
+    equal = replace(PLANE, exit_slit_um=20.0)
+    entrance, exit_ = equal.bandpass_nm(589.3)
+    alpha, beta = equal.angles_rad(589.3)
+    assert equal.anamorphism(589.3) == pytest.approx(entrance / exit_, rel=1e-12)
+    assert equal.anamorphism(589.3) == pytest.approx(math.cos(alpha) / math.cos(beta), rel=1e-12)
+    assert replace(LITTROW, exit_slit_um=20.0).anamorphism(589.3) == 1.0
+
+
+@pytest.mark.parametrize("mount", [*MOUNTS, TABLE], ids=["plane", "sine bar", "littrow", "concave", "table"])
+def test_a_mount_comes_back_from_its_json(mount: Mount) -> None:
+    assert mount_from_json(json.loads(json.dumps(mount_to_json(mount)))) == mount
+
+
+def test_a_plane_mount_written_before_there_were_drives_to_choose_from() -> None:
+    old = {
+        name: value
+        for name, value in mount_to_json(PLANE).items()
+        if name not in ("drive", "steps_per_unit_sine")
+    }
+    assert mount_from_json(old) == PLANE
+
+
+@pytest.mark.parametrize(
+    ("fields", "message"),
+    [
+        ({"kind": "prism"}, "kind = 'prism'; allowed: 'plane', 'littrow', 'concave', 'table'"),
+        ({}, "kind = None; allowed"),
+        ({"kind": "table", "medium": "air"}, "a mount of kind 'table' is not made of medium: 'wavelengths'"),
+        ({"kind": "plane", "order": 1}, "a mount of kind 'plane' is not made of order"),
+        ({"kind": "table", "medium": "air", "wavelengths": [2.0, 1.0]}, "ascending"),
+    ],
+)
+def test_json_that_is_no_mount(fields: dict[str, object], message: str) -> None:
+    with pytest.raises(ValueError, match=message):
+        mount_from_json(fields)
+
+
+@pytest.mark.parametrize(
+    ("mount", "field", "value"),
+    [
+        (PLANE, "drive", "belt"),
+        (SINE_BAR, "steps_per_unit_sine", 0.0),
+        (LITTROW, "off_plane_angle_deg", 90.0),
+        (LITTROW, "off_plane_angle_deg", -1.0),
+        (LITTROW, "focal_length_mm", 0.0),
+    ],
+)
+def test_other_mounts_that_make_no_sense(mount: PlaneMount, field: str, value: float | str) -> None:
+    with pytest.raises(ValueError, match=f"{field} = .*allowed"):
+        replace(mount, **{field: value})  # type: ignore[arg-type]
 
 
 # --- the expected width -------------------------------------------------------------------------------------
@@ -305,6 +447,74 @@ def test_width_of_extreme_ratios() -> None:
     sigma = 1e-4
     rounded = expected_fwhm_nm(box_widths_nm=(1.0, 1.0), gaussian_fwhm_nm=sigma * 2.354_820_045)
     assert rounded - 1.0 == pytest.approx(sigma * math.sqrt(2.0 / math.pi), rel=1e-3)
+
+
+def brute_with_diffraction(
+    boxes: tuple[float, ...], gaussian: float, lorentzian: float, diffraction: float
+) -> float:
+    """Boxes and Voigt line folded on a fine grid, then with sinc^2, whose wings the grid holds far out."""
+    x: NDArray[np.float64] = np.arange(-(2**17), 2**17) * (min(diffraction, max(gaussian, 1e-3)) / 60.0)
+    step = x[1] - x[0]
+    parts = [np.sinc(x * SINC2_FWHM / diffraction) ** 2]
+    parts += [np.clip(0.5 + (0.5 * box - np.abs(x)) / step, 0.0, 1.0) for box in boxes if box > 0.0]
+    if gaussian > 0.0 or lorentzian > 0.0:
+        parts.append(voigt_profile(x, gaussian / 2.354_820_045_030_949, 0.5 * lorentzian))
+    product = np.prod([np.fft.rfft(np.fft.ifftshift(part)) for part in parts], axis=0)
+    curve = np.fft.fftshift(np.fft.irfft(product, x.size))
+    middle = 2**17
+    k = int(np.flatnonzero(curve >= 0.5 * curve[middle])[-1])
+    return float(2.0 * (x[k] + step * (curve[k] - 0.5 * curve[middle]) / (curve[k] - curve[k + 1])))
+
+
+@pytest.mark.parametrize(
+    ("boxes", "gaussian", "lorentzian", "diffraction"),
+    [
+        ((0.019, 0.018), 0.003, 0.0, 0.0024),
+        ((0.019, 0.019), 0.0, 0.0, 0.01),
+        ((0.02, 0.01, 0.03), 0.004, 0.0, 0.003),
+        ((0.001, 0.001), 0.002, 0.001, 0.02),
+        ((), 0.01, 0.0, 0.01),
+    ],
+)
+def test_expected_width_with_diffraction_against_a_discrete_convolution(
+    boxes: tuple[float, ...], gaussian: float, lorentzian: float, diffraction: float
+) -> None:
+    """A Gaussian of the same FWHM in place of sinc^2 is 2 % off in the first case."""
+    ours = expected_fwhm_nm(
+        box_widths_nm=boxes,
+        gaussian_fwhm_nm=gaussian,
+        lorentzian_fwhm_nm=lorentzian,
+        diffraction_fwhm_nm=diffraction,
+    )
+    assert ours == pytest.approx(brute_with_diffraction(boxes, gaussian, lorentzian, diffraction), rel=2e-4)
+
+
+def test_widths_in_closed_form_by_waves() -> None:
+    """Diffraction alone; and three equal boxes, a parabola of half height at 3/2 - sqrt(3)/2 (de Boor
+    1978)."""
+    alone = expected_fwhm_nm(box_widths_nm=(), gaussian_fwhm_nm=0.0, diffraction_fwhm_nm=0.7)
+    assert alone == pytest.approx(0.7, rel=1e-12)
+    three = expected_fwhm_nm(box_widths_nm=(0.5, 0.5, 0.5), gaussian_fwhm_nm=0.0)
+    assert three == pytest.approx(0.5 * (3.0 - math.sqrt(3.0)), rel=1e-8)
+
+
+def test_both_ways_to_the_width_meet() -> None:
+    """Waves (forced by a third box of no account) and panels, each a road of its own."""
+    for lorentzian in (0.0, 0.004):
+        widths = {"gaussian_fwhm_nm": 0.003, "lorentzian_fwhm_nm": lorentzian}
+        by_panels = expected_fwhm_nm(box_widths_nm=(0.019, 0.018), **widths)
+        by_waves = expected_fwhm_nm(box_widths_nm=(0.019, 0.018, 1e-9), **widths)
+        assert by_waves == pytest.approx(by_panels, rel=1e-9)
+
+
+def test_fine_diffraction_goes_over_into_a_gaussian() -> None:
+    """Where the two ways meet, at 1/1000 of the wider box, the width jumps by less than a thousandth."""
+    for boxes in ((1.0, 1.0), (1.0, 0.5), (1.0, 0.0)):
+        below, above = (
+            expected_fwhm_nm(box_widths_nm=boxes, gaussian_fwhm_nm=0.0, diffraction_fwhm_nm=w)
+            for w in (0.999e-3, 1.001e-3)
+        )
+        assert below == pytest.approx(above, rel=1e-3)
 
 
 def test_order_of_the_slits_does_not_matter() -> None:

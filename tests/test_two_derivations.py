@@ -76,8 +76,11 @@ def fwhm_ratio(world: World, mount: PlaneMount, number: int) -> float:
     line = world.options.lamp.lines[number]
     _, _, profile = world.lines[number]
     where = line.wavelength_air_nm
-    gaussian = math.hypot(line.fwhm_nm, mount.diffraction_fwhm_nm(where))
-    ours = expected_fwhm_nm(box_widths_nm=mount.bandpass_nm(where), gaussian_fwhm_nm=gaussian)
+    ours = expected_fwhm_nm(
+        box_widths_nm=mount.bandpass_nm(where),
+        gaussian_fwhm_nm=line.fwhm_nm,
+        diffraction_fwhm_nm=mount.diffraction_fwhm_nm(where),
+    )
     return ours / profile.fwhm_nm
 
 
@@ -165,32 +168,35 @@ def convolved_fwhm_nm(boxes_nm: tuple[float, float], line_fwhm_nm: float, diffra
     return float((high + right - low - left) * step)
 
 
-def test_expected_width_is_the_recorded_one_but_for_the_wings_of_diffraction() -> None:
-    """The plan takes the sinc^2 of the ruled width (scale lambda/(m N), textbook) for a Gaussian of its FWHM,
-    0.886 of that, and so comes out 2.0 to 2.4 % narrow. Folding both by brute force explains the difference:
-    each side is right about what it computes."""
+WIDTHS_AGREE = 2e-5  # the world reads its width off a table of 16 cells to the line, on straight lines
+
+
+def test_expected_width_is_the_recorded_one() -> None:
+    """And what brute force makes of both slits, the line and the sinc^2 of the ruled width (scale
+    lambda/(m N), textbook)."""
     world, mount = true(), believed()
     for number, line in enumerate(world.options.lamp.lines):
         where = line.wavelength_air_nm
-        assert 0.975 < fwhm_ratio(world, mount, number) < 0.982
+        assert fwhm_ratio(world, mount, number) == pytest.approx(1.0, abs=WIDTHS_AGREE)
         boxes, scale_nm = mount.bandpass_nm(where), where / mount.grooves
         recorded = convolved_fwhm_nm(boxes, line.fwhm_nm, lambda x, s=scale_nm: np.sinc(x / s) ** 2)
         assert recorded == pytest.approx(world.lines[number].profile.fwhm_nm, rel=2e-3)
-        wide = mount.diffraction_fwhm_nm(where)
-        assert wide == pytest.approx(0.886 * scale_nm, rel=1e-3)
-        planned = convolved_fwhm_nm(
-            boxes, line.fwhm_nm, lambda x, w=wide: np.exp(-4.0 * math.log(2.0) * (x / w) ** 2)
-        )
-        assert planned == pytest.approx(fwhm_ratio(world, mount, number) * recorded, rel=3e-3)
 
 
 @pytest.mark.parametrize(
-    "mistake", [{"entrance_slit_um": 22.0}, {"exit_slit_um": 22.0}, {"focal_length_mm": 861.0}], ids=str
+    "mistake",
+    [
+        {"entrance_slit_um": 22.0},
+        {"exit_slit_um": 22.0},
+        {"focal_length_mm": 861.0},
+        {"ruled_width_mm": 80.0},
+    ],
+    ids=str,
 )
 def test_a_planted_mistake_in_the_width_shows(mistake: dict[str, float]) -> None:
     for number in range(len(true().lines)):
-        assert not 0.975 < fwhm_ratio(true(), believed(**mistake), number) < 0.982
-        assert not 0.975 < fwhm_ratio(true(**mistake), believed(), number) < 0.982
+        for world, mount in ((true(), believed(**mistake)), (true(**mistake), believed())):
+            assert abs(fwhm_ratio(world, mount, number) - 1.0) > 50.0 * WIDTHS_AGREE
 
 
 def test_the_mercury_pair_is_29_pm_apart_for_both() -> None:
