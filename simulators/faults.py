@@ -35,8 +35,22 @@ _ERRORS: dict[str, tuple[type[DeviceError], str]] = {
 class Fault(StrictModel):
     """One line of a fault script."""
 
-    device: Literal["drive", "detector", "shutter", "ambient"]
-    call: Literal["identify", "close", "home", "move_to", "halt", "gate", "set_open", "read"]
+    device: Literal[
+        "drive", "detector", "shutter", "ambient", "filter", "lamp", "slits", "reference", "attenuator"
+    ]
+    call: Literal[
+        "identify",
+        "close",
+        "home",
+        "move_to",
+        "halt",
+        "gate",
+        "measure",
+        "set_open",
+        "read",
+        "select",
+        "set_widths",
+    ]
     nth: int = Field(ge=1)
     kind: Literal["link", "reply", "hardware", "over-light", "crash", "hang"]
     times: int = Field(default=1, ge=1)

@@ -1,27 +1,41 @@
-"""The stepper drive that turns the grating: ramps, backlash, ringing, microstep error, heat.
+"""The stepper drive that turns the grating: ramps, backlash, ringing, periodic errors, heat.
 
-Three positions are told apart, all in steps: what was commanded, where the motor stands (microstep error,
-ringing included), and where the grating stands (backlash: the gear has play, the grating stays where it is
-until the motor has crossed it).
+Three positions are told apart, all in steps: what was commanded, where the motor stands (errors of
+microsteps, worm or leadscrew and ringing included), and where the grating stands (backlash: the gear has
+play, the grating stays where it is until the motor has crossed it).
 """
 
 from __future__ import annotations
 
 import math
+from collections.abc import Iterator
 from dataclasses import dataclass
+from typing import Literal
 
 from pydantic import Field
 
-from drivers.settings import StrictModel
+from drivers.settings import ListOf, Name, StrictModel
 from simulators.draw import Draws
 
 _STILL_STEPS = 0.01  # ringing below this no longer counts as motion
 
 
+class PeriodicErrorOptions(StrictModel):
+    """`[[world.options.drive.periodic_errors]]`: a worm, a leadscrew. Without a phase the seed chooses it."""
+
+    name: Name
+    period_steps: float = Field(gt=0.0)
+    amplitude_steps: float = Field(ge=0.0)
+    phase_rad: float | None = None
+
+
 class DriveOptions(StrictModel):
     """`[world.options.drive]`: the mechanics as they truly are."""
 
-    steps_per_radian: float = Field(default=1.0, gt=0.0)
+    kind: Literal["rotary", "sine-bar"] = "rotary"
+    steps_per_radian: float = Field(default=1.0, gt=0.0)  # rotary
+    steps_per_unit_sine: float | None = Field(default=None, gt=0.0)  # sine bar: its length in steps
+    periodic_errors: ListOf[PeriodicErrorOptions] = ()
     zero_order_steps: float = (
         0.0  # where zero order truly stands after homing; may differ from the bench file
     )
@@ -38,6 +52,12 @@ class DriveOptions(StrictModel):
     index_noise_steps: float = Field(default=0.0, ge=0.0)  # repeatability of the reference mark, 1 sigma
     thermal_steps_per_k: float = 0.0
     home_s: float = Field(default=4.0, ge=0.0)  # slow search for the mark, beside the way to it
+
+    def cross_checks(self) -> Iterator[tuple[str, str]]:
+        if self.kind == "sine-bar" and self.steps_per_unit_sine is None:
+            yield "steps_per_unit_sine", "missing; kind = 'sine-bar' needs the bar's length in steps"
+        if self.kind == "rotary" and self.steps_per_unit_sine is not None:
+            yield "steps_per_unit_sine", "only for kind = 'sine-bar'"
 
 
 @dataclass(frozen=True, slots=True)
@@ -79,11 +99,23 @@ class Motion:
 
 
 class Stepper:
-    """Motor, gear and grating. All times are monotonic ns."""
+    """Motor, gear and grating. All times are monotonic ns.
 
-    def __init__(self, options: DriveOptions, draws: Draws) -> None:
+    `draws` are those of the reference mark; `worm` chooses the phases of the periodic errors that have none.
+    """
+
+    def __init__(self, options: DriveOptions, draws: Draws, worm: Draws | None = None) -> None:
         self.options = options
         self._draws = draws
+        phases = (worm or draws).next_event().uniform(0.0, 2.0 * math.pi, len(options.periodic_errors))
+        self.periodic_errors = tuple(
+            (
+                error.amplitude_steps,
+                2.0 * math.pi / error.period_steps,
+                float(phase) if error.phase_rad is None else error.phase_rad,
+            )
+            for error, phase in zip(options.periodic_errors, phases, strict=True)
+        )
         self._full_steps = options.steps_per_full_step
         self._motion = Motion(0, 0.0, 0.0, options.speed_steps_per_s, options.acceleration_steps_per_s2)
         self._play_from = 0.0  # where the grating stood, in motor steps, when the present motion began
@@ -137,12 +169,21 @@ class Stepper:
         return self._rotation(self._motor(steps))
 
     def _rotation(self, grating_steps: float) -> float:
-        return (grating_steps - self.options.zero_order_steps) / self.options.steps_per_radian
+        from_zero = grating_steps - self.options.zero_order_steps
+        bar_steps = self.options.steps_per_unit_sine
+        if bar_steps is None:
+            return from_zero / self.options.steps_per_radian
+        # the leadscrew pushes the end of a bar sideways: the bar is the hypotenuse; a right angle is its stop
+        return math.asin(min(max(from_zero / bar_steps, -1.0), 1.0))
 
     def _motor(self, commanded: float) -> float:
-        """Microstep error: a sine wave in four full steps (common practice), the currents not being ideal."""
+        """Microstep error: a sine wave in four full steps (common practice), the currents not being ideal;
+        worm and leadscrew: sine waves of their own turns."""
         error = self.options.microstep_error_full_steps * self._full_steps
-        return commanded + error * math.sin(2.0 * math.pi * commanded / (4.0 * self._full_steps))
+        motor = commanded + error * math.sin(2.0 * math.pi * commanded / (4.0 * self._full_steps))
+        for amplitude, per_step, phase in self.periodic_errors:
+            motor += amplitude * math.sin(per_step * commanded + phase)
+        return motor
 
     def _engaged(self, now_ns: int) -> float:
         """Where the gear has taken the grating: pushed from below it stands where the motor stands, coming

@@ -10,59 +10,27 @@ from __future__ import annotations
 import asyncio
 from typing import Any
 
-from pydantic import Field
-
-from drivers.errors import Halted, LimitError, LinkError, OverLight
+from drivers.errors import Halted, LimitError, LinkError
 from drivers.protocols import (
     Ambient,
     AmbientReading,
+    AnalogueDetector,
     Detector,
     DriverContext,
-    Gate,
     GratingDrive,
-    Identity,
     Moved,
+    Selector,
     Shutter,
+    Slits,
 )
-from drivers.settings import StrictModel, parse_options
+from drivers.settings import parse_options
 from simulators.draw import Draws
-from simulators.world import SimulatedBench
-
-_LONGEST_GATE_NS = 1_000_000_000
-_TRIP_S = 0.001  # how fast the counter's supply notices over-light
-
-
-class MemoryOptions(StrictModel):
-    """`[<role>.options]` of every in-memory device."""
-
-    serial: str = Field(default="", max_length=40)
+from simulators.memory_detectors import MemoryAmmeter, MemoryCounter, MemoryReference
+from simulators.memory_device import MemoryDevice, MemoryOptions
+from simulators.memory_selectors import MemorySelector, MemorySlits, SelectorOptions
 
 
-class _MemoryDevice:
-    """What the four have in common: a world, a name in it, a script of faults."""
-
-    _maker = ""
-    _model = ""
-    _serial = ""
-
-    def __init__(self, options: MemoryOptions, context: DriverContext) -> None:
-        if context.world is None:
-            raise LimitError(context.role, "this driver plays on a simulated bench: give a [world] table")
-        self._world: SimulatedBench = context.world
-        self._role = context.role
-        self._clock = context.clock
-        self._serial = options.serial or self._serial
-        self._faults = self._world.faults
-
-    async def identify(self, *, deadline_s: float) -> Identity:
-        await self._faults.pass_or_fail(self._role, "identify", deadline_s=deadline_s)
-        return Identity(self._maker, self._model, self._serial, "sim 1")
-
-    async def close(self) -> None:
-        await self._faults.pass_or_fail(self._role, "close")
-
-
-class MemoryGratingDrive(_MemoryDevice):
+class MemoryGratingDrive(MemoryDevice):
     _maker = "Tallow & Reed"
     _model = "Quarterstaff 7 grating drive"
     _serial = "TR7-0031"
@@ -132,39 +100,7 @@ class MemoryGratingDrive(_MemoryDevice):
             self._waiting.set_result(True)
 
 
-class MemoryCounter(_MemoryDevice):
-    _maker = "Nightjar Counting"
-    _model = "Hush 2 photon counter"
-    _serial = "NJ-2210"
-
-    async def gate(self, gate_ns: int, *, deadline_s: float) -> Gate:
-        if not 0 < gate_ns <= _LONGEST_GATE_NS:
-            raise LimitError(self._role, f"a gate of {gate_ns} ns; allowed are 1 ns to 1 s")
-        await self._faults.pass_or_fail(self._role, "gate", deadline_s=deadline_s)
-        counter, clock = self._world.counter, self._clock
-        start_ns = clock.monotonic_ns()
-        if counter.is_too_bright(self._world.brightest_rate_per_s) and counter.is_too_bright(
-            self._world.mean_rate_per_s(start_ns, start_ns + 1)
-        ):
-            await asyncio.sleep(_TRIP_S)
-            raise self._over_light()
-        gate_s = gate_ns * 1e-9
-        await asyncio.sleep(min(gate_s, deadline_s))
-        if gate_s > deadline_s:
-            raise LinkError(self._role, f"no counts within {deadline_s:g} s")
-        rate_per_s = self._world.mean_rate_per_s(start_ns, start_ns + gate_ns)
-        if counter.is_too_bright(rate_per_s):
-            raise self._over_light()
-        counts, flags = counter.count(rate_per_s=rate_per_s, gate_s=gate_s)
-        return Gate(counts, gate_ns, flags)
-
-    def _over_light(self) -> OverLight:
-        self._world.counter.trip(self._clock.monotonic_ns())
-        trip = self._world.counter.options.trip_rate_per_s
-        return OverLight(self._role, f"more than {trip:g} counts per s: the supply has tripped")
-
-
-class MemoryShutter(_MemoryDevice):
+class MemoryShutter(MemoryDevice):
     _maker = "Wick & Daughters"
     _model = "Blink shutter"
     _serial = "WD-118"
@@ -181,7 +117,7 @@ class MemoryShutter(_MemoryDevice):
                 blade.set(True, self._clock.monotonic_ns())
 
 
-class MemoryAmbient(_MemoryDevice):
+class MemoryAmbient(MemoryDevice):
     _maker = "Fenwick Glass"
     _model = "Weather post"
     _serial = "FG-7"
@@ -217,3 +153,23 @@ def shutter(options: dict[str, Any], context: DriverContext) -> Shutter:
 def ambient(options: dict[str, Any], context: DriverContext) -> Ambient:
     """Factory of the air sensor."""
     return MemoryAmbient(_options(options, context), context)
+
+
+def analogue(options: dict[str, Any], context: DriverContext) -> AnalogueDetector:
+    """Factory of the photocurrent amplifier on the counter's tube."""
+    return MemoryAmmeter(_options(options, context), context)
+
+
+def reference(options: dict[str, Any], context: DriverContext) -> Detector:
+    """Factory of the counter that looks at the lamp itself."""
+    return MemoryReference(_options(options, context), context)
+
+
+def selector(options: dict[str, Any], context: DriverContext) -> Selector:
+    """Factory of a filter wheel, a lamp mirror or an attenuator wheel: which one, the role says."""
+    return MemorySelector(parse_options(SelectorOptions, options, f"{context.role}.options"), context)
+
+
+def slits(options: dict[str, Any], context: DriverContext) -> Slits:
+    """Factory of the motorised slits."""
+    return MemorySlits(_options(options, context), context)

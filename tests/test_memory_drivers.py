@@ -4,15 +4,12 @@ from __future__ import annotations
 
 import asyncio
 import itertools
-import tomllib
 from collections.abc import Awaitable, Callable
-from dataclasses import dataclass
-from pathlib import Path
 from typing import Any
 
 import pytest
+from simrig import Rig, S, bright, play
 
-from drivers.clock import Clock, run_virtual
 from drivers.errors import (
     GratingdError,
     Halted,
@@ -23,62 +20,8 @@ from drivers.errors import (
     ReplyError,
     SettingsError,
 )
-from drivers.protocols import Ambient, Detector, DriverContext, Gate, GratingDrive, Shutter
+from drivers.protocols import DriverContext, Gate
 from simulators import memory
-from simulators.world import World, build
-
-BENCH = Path(__file__).parent.parent / "configs" / "benches" / "emberlight-3.toml"
-START_NS = 1_928_599_200_000_000_000
-S = 1_000_000_000
-
-
-@dataclass(frozen=True)
-class Rig:
-    """One simulated bench with all its drivers."""
-
-    clock: Clock
-    world: World
-    drive: GratingDrive
-    detector: Detector
-    shutter: Shutter
-    ambient: Ambient
-
-    @property
-    def top_steps(self) -> int:
-        """Where the strong line of the 313 nm pair stands."""
-        drive = self.world.options.drive
-        rotation = self.world.lines[0].profile.rotation_rad
-        return round(drive.zero_order_steps + drive.steps_per_radian * rotation)
-
-
-def play(
-    story: Callable[[Rig], Awaitable[Any]], *, seed: int = 1, faults: list[Any] | None = None, **changes: Any
-) -> Any:
-    """Run one story on a fresh rig under virtual time; keys of `changes` replace tables of the world."""
-    with BENCH.open("rb") as stream:
-        options = tomllib.load(stream)["world"]["options"]
-    for table, keys in changes.items():
-        options[table] = options[table] | keys
-    options["faults"] = faults or []
-
-    async def main(clock: Clock) -> Any:
-        world = build(options, DriverContext(clock, "world", seed, str(BENCH.parent)))
-
-        def context(role: str) -> DriverContext:
-            return DriverContext(clock, role, seed, str(BENCH.parent), world)
-
-        rig = Rig(
-            clock,
-            world,
-            memory.grating_drive({}, context("drive")),
-            memory.counter({}, context("detector")),
-            memory.shutter({}, context("shutter")),
-            memory.ambient({}, context("ambient")),
-        )
-        return await story(rig)
-
-    return run_virtual(main, START_NS)
-
 
 # ---- what each call does --------------------------------------------------------------------------------
 
@@ -295,11 +238,6 @@ def test_gates_are_at_most_a_second(gate_ns: int) -> None:
     play(story)
 
 
-def bright(rate_per_s: float) -> dict[str, Any]:
-    line = {"wavelength_air_nm": 313.155, "strength_per_s": rate_per_s, "doppler_fwhm_pm": 1.0}
-    return {"lines": [line]}
-
-
 def test_over_light_is_noticed_within_a_millisecond_and_leaves_a_glow() -> None:
     async def story(rig: Rig) -> int:
         await rig.drive.home(deadline_s=10.0)
@@ -384,6 +322,13 @@ CALLS: dict[tuple[str, str], Callable[[Rig], Awaitable[Any]]] = {
     ("ambient", "identify"): lambda rig: rig.ambient.identify(deadline_s=1.0),
     ("ambient", "read"): lambda rig: rig.ambient.read(deadline_s=1.0),
     ("ambient", "close"): lambda rig: rig.ambient.close(),
+    ("detector", "measure"): lambda rig: rig.analogue.measure(S, deadline_s=2.0),
+    ("filter", "identify"): lambda rig: rig.filter.identify(deadline_s=1.0),
+    ("filter", "select"): lambda rig: rig.filter.select("none", deadline_s=1.0),
+    ("lamp", "select"): lambda rig: rig.lamp.select("lamp", deadline_s=1.0),
+    ("slits", "set_widths"): lambda rig: rig.slits.set_widths(entrance_um=30.0, exit_um=30.0, deadline_s=1.0),
+    ("reference", "gate"): lambda rig: rig.reference.gate(S, deadline_s=2.0),
+    ("reference", "close"): lambda rig: rig.reference.close(),
 }
 ERRORS: dict[str, type[Exception]] = {
     "link": LinkError,

@@ -10,6 +10,7 @@ from typing import Any
 import numpy as np
 import pytest
 from scipy.special import gammainc, ndtri
+from simbench import START_NS, StoppedClock
 
 from drivers.clock import Clock, run_virtual
 from drivers.errors import SettingsError
@@ -19,12 +20,14 @@ from simulators.detector import Counter, DetectorOptions, registered
 from simulators.draw import Draws, smooth_drift
 from simulators.lamp import Lamp, LampOptions, LineOptions, doppler_fwhm_nm
 from simulators.mechanics import DriveOptions, Motion, Stepper
-from simulators.optics import LineProfile, OpticsOptions, Spectrometer
+from simulators.mounts import PlaneOptions
+from simulators.optics import Spectrometer
+from simulators.profile import LineProfile
+from simulators.shapes import gaussian
 from simulators.shutter import ShutterBlade, ShutterOptions
 from simulators.world import World, build
 
 BENCH = Path(__file__).parent.parent / "configs" / "benches" / "emberlight-3.toml"
-START_NS = 1_928_599_200_000_000_000
 S = 1_000_000_000
 
 
@@ -37,7 +40,7 @@ def optics(**changes: Any) -> Spectrometer:
         "entrance_slit_um": 20.0,
         "exit_slit_um": 20.0,
     }
-    return Spectrometer(OpticsOptions(**(options | changes)))
+    return Spectrometer(PlaneOptions(**(options | changes)))
 
 
 def world_options() -> dict[str, Any]:
@@ -48,21 +51,6 @@ def world_options() -> dict[str, Any]:
 
 def shipped_world(clock: Clock, seed: int = 1, **changes: Any) -> World:
     return build(world_options() | changes, DriverContext(clock, "world", seed, str(BENCH.parent)))
-
-
-class StoppedClock:
-    """A clock that a test moves by hand."""
-
-    is_virtual = True
-
-    def __init__(self) -> None:
-        self.now_ns = 0
-
-    def utc_ns(self) -> int:
-        return START_NS + self.now_ns
-
-    def monotonic_ns(self) -> int:
-        return self.now_ns
 
 
 # ---- rays -----------------------------------------------------------------------------------------------
@@ -105,7 +93,7 @@ def test_a_wavelength_beyond_the_grating_is_refused() -> None:
 def test_narrow_slits_leave_the_diffraction_of_the_ruled_width(order: int, wavelength_nm: float) -> None:
     """Published: sinc^2 has its half maximum at a full width of 0.886 lambda/(m N)."""
     spectrometer = optics(order=order, ruled_width_mm=20.0, entrance_slit_um=0.3, exit_slit_um=0.3)
-    profile = LineProfile(spectrometer, wavelength_nm=wavelength_nm, fwhm_nm=2e-5)
+    profile = LineProfile(spectrometer, wavelength_nm=wavelength_nm, shape=gaussian(2e-5))
     assert profile.fwhm_nm == pytest.approx(0.8859 * wavelength_nm / (order * 24000.0), rel=1e-3)
 
 
@@ -125,7 +113,7 @@ def test_transmission_through_the_slits_matches_a_ray_trace() -> None:
     """Wide ruling, so that diffraction is small; unequal slits, so that the top is flat."""
     spectrometer = optics(ruled_width_mm=1000.0, entrance_slit_um=15.0, exit_slit_um=40.0)
     fwhm_nm = 2e-3
-    profile = LineProfile(spectrometer, wavelength_nm=313.155, fwhm_nm=fwhm_nm)
+    profile = LineProfile(spectrometer, wavelength_nm=313.155, shape=gaussian(fwhm_nm))
     quantiles = ndtri((np.arange(400) + 0.5) / 400.0)
     wavelengths = 313.155 + fwhm_nm / 2.354820045 * quantiles
     for offset_rad in np.linspace(-2.2e-5, 2.2e-5, 23):
@@ -158,7 +146,7 @@ def test_the_table_holds_its_stated_accuracy(wavelength_nm: float) -> None:
     """2e-6 of the peak, as the profile's description promises."""
     spectrometer = optics()
     fwhm_nm = 0.8e-3
-    profile = LineProfile(spectrometer, wavelength_nm=wavelength_nm, fwhm_nm=fwhm_nm)
+    profile = LineProfile(spectrometer, wavelength_nm=wavelength_nm, shape=gaussian(fwhm_nm))
     for offset_rad in (-4.1e-5, -1.137e-5, -3.33e-6, 1.01e-7, 5.77e-6, 1.243e-5, 2.5e-5):
         exact = integrated_share(spectrometer, wavelength_nm, fwhm_nm, profile.rotation_rad + offset_rad)
         assert profile.share(offset_rad) == pytest.approx(exact, abs=2e-6), offset_rad
@@ -166,8 +154,8 @@ def test_the_table_holds_its_stated_accuracy(wavelength_nm: float) -> None:
 
 def test_far_wings_go_on_smoothly_as_the_inverse_square() -> None:
     spectrometer = optics()
-    profile = LineProfile(spectrometer, wavelength_nm=313.155, fwhm_nm=0.8e-3)
-    edge = profile._reach_rad
+    profile = LineProfile(spectrometer, wavelength_nm=313.155, shape=gaussian(0.8e-3))
+    edge = profile.reach_rad
     inside, outside = profile.share(edge * 0.9999), profile.share(edge * 1.0001)
     assert outside == pytest.approx(inside, rel=0.1)
     assert profile.share(4.0 * edge) == pytest.approx(profile.share(2.0 * edge) / 4.0, rel=1e-12)
@@ -175,8 +163,8 @@ def test_far_wings_go_on_smoothly_as_the_inverse_square() -> None:
 
 
 def test_coma_leaves_the_light_and_skews_the_line() -> None:
-    plain = LineProfile(optics(), wavelength_nm=313.155, fwhm_nm=0.8e-3)
-    skewed = LineProfile(optics(coma_um=2.0), wavelength_nm=313.155, fwhm_nm=0.8e-3)
+    plain = LineProfile(optics(), wavelength_nm=313.155, shape=gaussian(0.8e-3))
+    skewed = LineProfile(optics(coma_um=2.0), wavelength_nm=313.155, shape=gaussian(0.8e-3))
     offsets = np.linspace(-6e-5, 6e-5, 4001)
     one, two = (np.array([p.share(float(x)) for x in offsets]) for p in (plain, skewed))
     assert two.sum() == pytest.approx(one.sum(), rel=1e-3)
