@@ -6,12 +6,17 @@ import numpy as np
 import pytest
 
 from analysis.counting import (
+    LOAD_LIMIT,
     FloatArray,
     deviance,
     live_time_s,
+    load,
+    paralysable_rate_per_s,
+    refuse_overload,
     registered_rate_per_s,
     true_rate_per_s,
 )
+from simulators.detector import registered
 
 
 def pulse_by_pulse(rate: float, dead_time: float, gate: float, gates: int, seed: int) -> FloatArray:
@@ -28,14 +33,17 @@ def pulse_by_pulse(rate: float, dead_time: float, gate: float, gates: int, seed:
 
 
 def test_textbook_rate() -> None:
-    """1 us and a true rate of 1e5 /s: 90 909.09 /s registered by a non-paralysable counter (textbook)."""
-    assert registered_rate_per_s(np.array([1e5]), dead_time_s=1e-6)[0] == pytest.approx(90909.0909, abs=1e-3)
+    """1 us and a true rate of 1e5 /s: 90 909.09 /s registered by a non-paralysable counter, 90 483.74 /s by a
+    paralysable one (textbook)."""
+    true = np.array([1e5])
+    assert registered_rate_per_s(true, dead_time_s=1e-6)[0] == pytest.approx(90909.09, abs=5e-3)
+    assert paralysable_rate_per_s(true, dead_time_s=1e-6)[0] == pytest.approx(90483.74, abs=5e-3)
     assert true_rate_per_s(np.array([90909.0909090909]), dead_time_s=1e-6)[0] == pytest.approx(1e5)
     with pytest.raises(ValueError, match="below 1"):
         true_rate_per_s(np.array([2e6]), dead_time_s=1e-6)
 
 
-@pytest.mark.parametrize("load", [0.02, 0.1, 0.3])
+@pytest.mark.parametrize("load", [0.02, 0.1, 0.3, 3.0 / 7.0])
 def test_counts_are_underdispersed(load: float) -> None:
     """Variance over mean is 1/(1 + r tau)^2 (Mueller 1974, NIM 117, 401; memory)."""
     seed, gate, rate = 11, 1.0, 400.0
@@ -69,3 +77,35 @@ def test_deviance_is_the_likelihood_ratio() -> None:
 
 def test_live_time_never_vanishes() -> None:
     assert live_time_s(np.array([5.0, 2e9]), np.ones(2), dead_time_s=1e-8).tolist() == [1.0 - 5e-8, 1e-3]
+
+
+def test_paralysable_pulses() -> None:
+    """Pulses drawn one by one, each of them prolonging the dead time, register at r exp(-r tau)."""
+    seed, rate, dead_time = 3, 1e5, 1e-6
+    gaps = np.random.Generator(np.random.Philox(key=seed)).exponential(1.0 / rate, 2_000_000)
+    share = float(np.mean(gaps > dead_time))
+    expected = paralysable_rate_per_s(np.array([rate]), dead_time_s=dead_time)[0] / rate
+    assert abs(share - expected) < 4.0 * np.sqrt(share * (1.0 - share) / gaps.size), seed
+
+
+@pytest.mark.parametrize("true_load", [0.1, 3.0 / 7.0])
+def test_the_gates_first_pulse_is_never_lost(true_load: float) -> None:
+    """A counter that is ready when the gate opens registers x^2/(2 (1 + x)^2) pulses more a gate, x = r tau,
+    and no more: the edge effect that the likelihood leaves out (renewal theory: Cox 1962, section 4.2)."""
+    seed, mean, gates = 8, 40.0, 60_000
+    rng = np.random.Generator(np.random.Philox(key=seed))
+    dead_time = true_load / mean
+    counts = [registered(rng, rate_per_s=mean, gate_s=1.0, dead_time_s=dead_time) for _ in range(gates)]
+    extra = float(np.mean(counts)) - mean / (1.0 + true_load)
+    expected = true_load**2 / (2.0 * (1.0 + true_load) ** 2)
+    assert abs(extra - expected) < 4.0 * float(np.std(counts)) / np.sqrt(gates), seed
+    assert expected < 0.046
+
+
+def test_load_and_its_limit() -> None:
+    """A counter dead for more than three tenths of a gate is refused, one that just keeps to it is not."""
+    counts, gate = np.array([3.0e6, 0.0, 1.0e6]), np.array([0.3, 0.0, 1.0])
+    assert load(counts, gate, dead_time_s=30e-9) == pytest.approx([LOAD_LIMIT, 0.0, 0.03])
+    refuse_overload(counts, np.array([0.3001, 0.0, 1.0]), dead_time_s=30e-9)
+    with pytest.raises(ValueError, match=r"dead for 30% of a gate.*less light"):
+        refuse_overload(counts, np.array([0.2999, 0.0, 1.0]), dead_time_s=30e-9)
