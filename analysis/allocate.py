@@ -1,10 +1,10 @@
 """Where the next light goes: one entry, `next_sweep`.
 
-Uniform sweeps over the window, always in the direction of rising steps (a drive with backlash is approached
-from one side), each opened by one dark point. Successive sweeps start a fraction of a step later, so that
-after `groups` sweeps the window is sampled `groups` times as finely and a periodic error of the drive is not
-always met at the same phase. Each of these interleaved combs is a group with a gain of its own in the fit,
-which lets the lamp drift between sweeps.
+Uniform sweeps over the window, one stretch after another, always in the direction of rising steps (a drive
+with backlash is approached from one side), each opened by one dark point. Successive sweeps start a fraction
+of a step later, so that after `groups` sweeps the window is sampled `groups` times as finely and a periodic
+error of the drive is not always met at the same phase. Each of these interleaved combs is a group with a gain
+of its own in the fit, which lets the lamp drift between sweeps.
 """
 
 from __future__ import annotations
@@ -37,10 +37,9 @@ class Visit:
 
 @dataclass(frozen=True, slots=True)
 class Window:
-    """The stretch of drive positions to be swept, in whole steps, and the dwells, in ns."""
+    """The stretches of drive positions to be swept, ascending, in whole steps, and the dwells, in ns."""
 
-    lowest_steps: int
-    highest_steps: int
+    stretches: tuple[tuple[int, int], ...]
     step_steps: int
     groups: int
     dwell_ns: int
@@ -49,17 +48,31 @@ class Window:
     def __post_init__(self) -> None:
         if not 1 <= self.groups <= self.step_steps:
             raise ValueError("groups must be between 1 and step_steps")
-        if self.highest_steps - self.lowest_steps < self.step_steps:
-            raise ValueError("a window needs highest_steps at least step_steps above lowest_steps")
+        if not self.stretches:
+            raise ValueError("a window needs a stretch to be swept")
+        if any(highest - lowest < self.step_steps for lowest, highest in self.stretches):
+            raise ValueError("a stretch must end at least step_steps above its beginning")
+        ends = [end for stretch in self.stretches for end in stretch]
+        if ends != sorted(ends):
+            raise ValueError("stretches must ascend and not overlap")
         if self.dwell_ns <= 0 or self.dark_ns < 0:
             raise ValueError("dwell_ns must be positive, dark_ns not negative")
 
+    @property
+    def lowest_steps(self) -> int:
+        return self.stretches[0][0]
+
+    @property
+    def highest_steps(self) -> int:
+        return self.stretches[-1][1]
+
     def to_json(self) -> dict[str, Any]:
-        return asdict(self)
+        return asdict(self) | {"stretches": [list(stretch) for stretch in self.stretches]}
 
     @staticmethod
     def from_json(plain: Mapping[str, Any]) -> Window:
-        return Window(**plain)
+        stretches = tuple((lowest, highest) for lowest, highest in plain["stretches"])
+        return Window(**{**plain, "stretches": stretches})
 
 
 def next_sweep(window: Window, *, number: int) -> tuple[Visit, ...]:
@@ -71,9 +84,17 @@ def next_sweep(window: Window, *, number: int) -> tuple[Visit, ...]:
 def _comb(window: Window, group: int) -> tuple[Visit, ...]:
     # Bit-reversed-like order of the offsets (0, 1/2, 1/4, 3/4): any run of sweeps covers the step evenly.
     order = sorted(range(window.groups), key=lambda g: int(f"{g:08b}"[::-1], 2))
-    start_steps = window.lowest_steps + order[group] * window.step_steps // window.groups
-    positions = range(start_steps, window.highest_steps + 1, window.step_steps)
-    visits = [Visit(steps, window.dwell_ns, True, group) for steps in positions]
+    late_steps = order[group] * window.step_steps // window.groups
+    visits = [
+        Visit(steps, window.dwell_ns, True, group)
+        for lowest, highest in window.stretches
+        for steps in range(lowest + late_steps, highest + 1, window.step_steps)
+    ]
     if window.dark_ns > 0:
-        visits.insert(0, Visit(start_steps, window.dark_ns, False, group))
+        visits.insert(0, Visit(visits[0].steps, window.dark_ns, False, group))
     return tuple(visits)
+
+
+def settling_dark(window: Window) -> Visit:
+    """The dwell that is repeated behind a closed shutter until the dark has settled (analysis.dark)."""
+    return Visit(window.lowest_steps, window.dark_ns, False, 0)

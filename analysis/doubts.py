@@ -7,10 +7,12 @@ from dataclasses import replace
 
 import numpy as np
 
+from analysis.candidates import REVERSED, Candidates, model_of
 from analysis.exclusion import added_line
 from analysis.fit import FitResult, fit
 from analysis.model import FeatureModel, vector
 from analysis.profile import FWHM_PER_SIGMA
+from analysis.starts import fit_reversed
 
 POOR_FIT_SIGMAS = 4.753
 """One-sided normal quantile of 1e-6."""
@@ -26,6 +28,13 @@ area and place)."""
 FURTHER_ALLOWANCES = 3.0
 """A further line has more than this many shape allowances of the nearer line's area: a fainter one may be
 that line's own flank."""
+DRIFT = 0.05
+DRIFT_SIGMAS = 3.0
+"""Gains of sweep combs that differ by more than DRIFT, and by this many standard uncertainties more."""
+REVERSED_FWHM = 2.0
+"""Lines further apart than this are no two humps of one."""
+REVERSED_LOSS = 3.0
+"""A self-reversed line is about as good as a pair if its log-likelihood is no lower by more than this."""
 _TOLERANCE = 1e-3
 
 
@@ -91,10 +100,36 @@ def sharper_than_stated(model: FeatureModel, made: FitResult) -> bool:
     if made.value("sigma_nm") * FWHM_PER_SIGMA > feature.line_fwhm_nm:
         return False
     boxes = (NARROW_BOXES * feature.box_widths_nm[0], NARROW_BOXES * feature.box_widths_nm[1])
-    sharper = FeatureModel(model.counts, replace(feature, box_widths_nm=boxes), model.lines)
+    sharper = replace(model, feature=replace(feature, box_widths_nm=boxes))
     start = np.clip(made.values, sharper.lower, sharper.upper)
     better = fit(sharper, start, tolerance=0.1, iterations=12)  # only a large gain matters
     return 2.0 * (better.log_likelihood - made.log_likelihood) > CLEAR_GAIN
+
+
+def lamp_drifts(model: FeatureModel, made: FitResult) -> bool:
+    """Whether the gains of two sweep combs differ by more than 5 %, beyond what their uncertainty tells."""
+    gains = model.gains(made.values)
+    if gains.size < 2:
+        return False
+    first = model.index["gain_1"]
+    covariance = np.zeros((gains.size, gains.size))
+    covariance[1:, 1:] = made.covariance[first : first + gains.size - 1, first : first + gains.size - 1]
+    low, high = int(np.argmin(gains)), int(np.argmax(gains))
+    variance = covariance[low, low] + covariance[high, high] - 2.0 * covariance[low, high]
+    return bool(gains[high] - gains[low] - DRIFT_SIGMAS * np.sqrt(max(variance, 0.0)) > DRIFT)
+
+
+def is_like_reversed(candidates: Candidates, separation_nm: float) -> bool:
+    """Whether a self-reversed line, excluded by the target, would describe a pair's data about as well."""
+    pair = candidates.pair
+    feature = pair.model.feature
+    if feature.self_reversal != "excluded" or feature.kind != "emission":
+        return False
+    if separation_nm > REVERSED_FWHM * feature.fwhm_nm:
+        return False
+    model = model_of(REVERSED, pair.model.counts, feature)
+    made = fit_reversed(model, tolerance=0.1)
+    return made.log_likelihood > pair.best.log_likelihood - REVERSED_LOSS
 
 
 def further_line_nm(model: FeatureModel, pair: FitResult) -> float | None:
@@ -103,7 +138,8 @@ def further_line_nm(model: FeatureModel, pair: FitResult) -> float | None:
     Sought to first order on a grid of an eighth of the FWHM, then fitted as a known line is.
     """
     feature = model.feature
-    places = np.arange(model.x[0], model.x[-1], 0.125 * feature.fwhm_nm)
+    ends = model.windows_nm
+    places = np.concatenate([np.arange(left, right, 0.125 * feature.fwhm_nm) for left, right in ends])
     push, left = added_line(model, pair, places)
     found = np.where((push > 0.0) & (left > 0.0), push**2 / np.where(left > 0.0, left, 1.0), 0.0)
     best = int(np.argmax(found))

@@ -16,7 +16,8 @@ its covariance) were tried and dropped: with blocks of a half to twice what came
 sooner (pairs at 1 FWHM after 4.6, 4.6, 4.6 sweeps; singles after 8.4, 9.0, 9.8).
 
 Assumed: within a block the gates of one dither group are proportional from position to position (whole
-sweeps), so that the rival's sum over blocks is that of the sums.
+sweeps), so that the rival's sum over blocks is that of the sums. Where counts scatter more or less than
+Poisson counts do, their dispersion divides both sums.
 """
 
 from __future__ import annotations
@@ -39,11 +40,26 @@ def between(now: Counts, then: Counts) -> Counts:
         raise ValueError(f"position {key} of the earlier look is missing from the later one") from None
     counts[where] -= then.counts
     gate[where] -= then.gate_s
+    if now.pedestal_per_s > 0.0:  # a faint current may well read below what was there before
+        counts = np.maximum(counts, 0.0)
     if (counts < -0.5).any() or (gate < -1e-9).any():
         raise ValueError("the earlier look counted more than the later one")
     gate[gate < 1e-9] = 0.0
+    exposure = now.exposure
+    if exposure is not None and then.exposure is not None:
+        # a mean over gate time, so the block's is what is left of the sum
+        summed = exposure * now.gate_s
+        summed[where] -= then.exposure * then.gate_s
+        exposure = np.where(gate > 0.0, np.maximum(summed, 0.0) / np.where(gate > 0.0, gate, 1.0), 1.0)
     dark, dark_gate = now.dark_counts - then.dark_counts, now.dark_gate_s - then.dark_gate_s
-    return replace(now, counts=counts, gate_s=gate, dark_counts=dark, dark_gate_s=max(dark_gate, 0.0))
+    return replace(
+        now,
+        counts=counts,
+        gate_s=gate,
+        dark_counts=dark,
+        dark_gate_s=max(dark_gate, 0.0),
+        exposure=exposure,
+    )
 
 
 def log_shares(model: FeatureModel, values: FloatArray) -> float:

@@ -7,7 +7,6 @@ import numpy as np
 from analysis.counting import FloatArray
 from analysis.fit import FitResult, inverse
 from analysis.model import FeatureModel
-from analysis.profile import line_profile
 from analysis.question import Exclusion, Question
 
 QUANTILE_95 = 1.645
@@ -17,7 +16,8 @@ STEPS_A_SIDE = 12
 def exclusion_curve(
     model: FeatureModel, single: FitResult, question: Question, spread: float = 1.0
 ) -> tuple[Exclusion, ...]:
-    """Upper limits (95 %) of the ratio at 12 separations on either side, as far as the window reaches.
+    """Upper limits (95 %) of the ratio at 12 separations on either side, as far as the window reaches, and at
+    12 more in every further window.
 
     A faint second line is added to the single fit to first order, everything else free, the shape modes held
     by their allowance: estimate r and deviation u follow from one linear step; the limit is
@@ -28,10 +28,14 @@ def exclusion_curve(
     if not area > 0.0:
         return ()
     near = min(question.smallest_separation_nm, 0.5 * feature.fwhm_nm)
-    places = []
-    for side, room in ((-1.0, centre - model.x[0]), (1.0, model.x[-1] - centre)):
-        if room > near:
-            places.extend(side * near * (room / near) ** (np.arange(STEPS_A_SIDE) / (STEPS_A_SIDE - 1)))
+    places: list[float] = []
+    for low, high in model.windows_nm:
+        if not low <= centre <= high:
+            places.extend(np.linspace(low - centre, high - centre, STEPS_A_SIDE))
+            continue
+        for side, room in ((-1.0, centre - low), (1.0, high - centre)):
+            if room > near:
+                places.extend(side * near * (room / near) ** (np.arange(STEPS_A_SIDE) / (STEPS_A_SIDE - 1)))
     separations = np.sort(np.array(places))
     push, left = added_line(model, single, centre + separations)
     curve = []
@@ -57,14 +61,8 @@ def added_line(model: FeatureModel, made: FitResult, places_nm: FloatArray) -> t
     information = (jacobian * weight[:, None]).T @ jacobian + np.diag(pull)
     used = np.diag(information) > 0.0
     covariance = inverse(information[np.ix_(used, used)])
-    profile = line_profile(
-        model.x - places_nm[:, None],
-        sigma_nm=made.value("sigma_nm"),
-        gamma_nm=model.value(made.values, "gamma_nm"),
-        box_widths_nm=model.feature.box_widths_nm,
-    ).value
     lines = np.zeros((places_nm.size, mean.size))
-    lines[:, : model.x.size] = profile * model.gains(made.values)[model.group] * model.live_s(made.values)
+    lines[:, : model.x.size] = model.added_light(made.values, places_nm)
     cross = (lines * weight) @ jacobian[:, used]
     own = np.sum(lines * lines * weight, axis=1) - np.sum((cross @ covariance) * cross, axis=1)
     # at the optimum the other parameters have no gradient (what a bound holds, it goes on holding)

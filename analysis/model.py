@@ -1,23 +1,28 @@
 """The rate expected at every position: one or two lines, known neighbours, background, dark, gains.
 
-    light(x) = sum_l A_l [P(x - c_l) + sum_m a_m h_m(x - c_l)] + background(x)
-    rate_i   = gain(group_i) light(x_i) + dark,       mean_i = rate_i (T_i - n_i tau)
+    light(x) = background(x) +- sum_l A_l [P(x - c_l) + sum_m a_m h_m(x - c_l)]      (minus: absorption)
+    rate_i   = gain(group_i) exposure_i light(x_i) + dark
+    mean_i   = rate_i (T_i - n_i tau) / dispersion_i,       data_i = n_i / dispersion_i
 
-P is the line seen through the slits, h_m the shape modes (coefficients common to all lines). Line 1 is the
-main line at centre_nm, line 2 stands at centre_nm + separation_nm with ratio times its area; known lines keep
-their distance from the main line. Everything is analytic, the Jacobian included.
+P is the line seen through the slits with its components, h_m the shape modes (coefficients common to all
+lines). Line 1 is the main line at centre_nm (the strength-weighted mean of its components), line 2 stands at
+centre_nm + separation_nm with ratio times its area; known lines keep their distance from the main line.
+Counts of variance phi times their mean, divided by phi, weigh as Poisson counts do (quasi-likelihood:
+Wedderburn 1974, Biometrika 61, 439). Everything is analytic, the Jacobian included.
 """
 
 from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass, field
-from typing import Protocol
 
 import numpy as np
 
+from analysis import reversal
+from analysis.background import Background, LinearBackground, StretchedBackground, stretch_of
 from analysis.counting import Counts, FloatArray, IntArray, live_time_s
-from analysis.profile import FWHM_PER_SIGMA, line_profile, mode_width, shape_modes
+from analysis.line import Shape, bare_line, components, observed_line
+from analysis.profile import FWHM_PER_SIGMA
 from analysis.question import Feature
 
 KNOWN_SHIFT_FWHM = 0.02
@@ -29,45 +34,6 @@ better, and there the prior moves it by less than its uncertainty."""
 _TINY = 1e-12
 
 
-class Background(Protocol):
-    """Light that belongs to no line, as a rate over position."""
-
-    @property
-    def names(self) -> tuple[str, ...]: ...
-
-    @property
-    def lower(self) -> tuple[float, ...]: ...
-
-    def evaluate(self, wavelength_nm: FloatArray, values: FloatArray) -> tuple[FloatArray, FloatArray]:
-        """Rate (N,) and its Jacobian (N, number of parameters)."""
-        ...
-
-
-@dataclass(frozen=True, slots=True)
-class LinearBackground:
-    """Flat, or a slope given by its rates at both ends of the window: never negative if neither is."""
-
-    left_nm: float
-    right_nm: float
-    sloping: bool
-    floor: float = 0.0
-    names: tuple[str, ...] = field(init=False)
-    lower: tuple[float, ...] = field(init=False)
-
-    def __post_init__(self) -> None:
-        names = ("background_left_per_s", "background_right_per_s") if self.sloping else ("background_per_s",)
-        object.__setattr__(self, "names", names)
-        object.__setattr__(self, "lower", (self.floor,) * len(names))
-
-    def evaluate(self, wavelength_nm: FloatArray, values: FloatArray) -> tuple[FloatArray, FloatArray]:
-        if not self.sloping:
-            return np.full(wavelength_nm.size, values[0]), np.ones((wavelength_nm.size, 1))
-        span = self.right_nm - self.left_nm
-        share = (wavelength_nm - self.left_nm) / (span if span > 0.0 else 1.0)
-        basis = np.stack([1.0 - share, share], axis=1)
-        return basis @ values, basis
-
-
 @dataclass(frozen=True)
 class FeatureModel:
     """One or two lines over the visited positions of `counts`. ValueError if nothing was counted.
@@ -76,6 +42,8 @@ class FeatureModel:
     (infinite sd: none). with_dark: fit the closed-shutter counts jointly, as a last row of their own.
     with_modes_bounded: shape modes are free within two allowances instead of drawn to zero by their prior,
     and gains have no prior either: a rival of a claim may be anything that is possible.
+    is_reversed: the main line is self-reversed (one line only; `analysis.reversal`).
+    x, observed, gate, group, sigma : (N,) of the visited positions; observed is counts over dispersion.
     """
 
     counts: Counts
@@ -84,6 +52,7 @@ class FeatureModel:
     with_dark: bool = True
     with_modes_bounded: bool = False
     background: Background | None = None
+    is_reversed: bool = False
     names: tuple[str, ...] = field(init=False)
     lower: FloatArray = field(init=False)
     upper: FloatArray = field(init=False)
@@ -91,34 +60,59 @@ class FeatureModel:
     prior_sd: FloatArray = field(init=False)
 
     def __post_init__(self) -> None:
-        if self.lines not in (1, 2):
-            raise ValueError(f"a feature has 1 or 2 lines, got {self.lines}")
-        if self.feature.shape not in ("voigt", "gaussian"):
-            raise ValueError(f"shape must be 'voigt' or 'gaussian', got {self.feature.shape!r}")
+        self._refuse_misuse()
         counts, feature = self.counts, self.feature
         visited = counts.gate_s > 0.0
         if not visited.any():
             raise ValueError("no position was visited: nothing to fit")
         put = object.__setattr__
-        self_x = counts.wavelength_nm[visited]
-        put(self, "x", self_x)
-        put(self, "observed", counts.counts[visited])
+        x = counts.wavelength_nm[visited]
+        ones = np.ones(x.size)
+        put(self, "x", x)
+        put(self, "registered", counts.counts[visited])
         put(self, "gate", counts.gate_s[visited])
         put(self, "group", counts.group[visited])
         put(self, "sigma", None if counts.sigma is None else counts.sigma[visited])
+        put(self, "exposure", ones if counts.exposure is None else counts.exposure[visited])
+        put(self, "dispersion", ones if counts.dispersion is None else counts.dispersion[visited])
+        put(self, "observed", self.registered / self.dispersion)
         if self.background is None:
-            floor = 0.0 if counts.sigma is None else -np.inf
-            made = LinearBackground(self_x[0], self_x[-1], feature.background == "slope", floor)
-            put(self, "background", made)
+            floor, sloping = 0.0 if counts.sigma is None else -np.inf, feature.background == "slope"
+            if len(feature.windows_nm) > 1:
+                put(self, "background", StretchedBackground(feature.windows_nm, sloping, floor))
+            else:
+                put(self, "background", LinearBackground(x[0], x[-1], sloping, floor))
         self._list_parameters()
 
     # the arrays of the visited positions, set once above
     x: FloatArray = field(init=False, repr=False)
     observed: FloatArray = field(init=False, repr=False)
+    registered: FloatArray = field(init=False, repr=False)
     gate: FloatArray = field(init=False, repr=False)
     group: IntArray = field(init=False, repr=False)
     sigma: FloatArray | None = field(init=False, repr=False)
+    exposure: FloatArray = field(init=False, repr=False)
+    dispersion: FloatArray = field(init=False, repr=False)
     index: dict[str, int] = field(init=False, repr=False)
+
+    def _refuse_misuse(self) -> None:
+        feature = self.feature
+        if self.lines not in (1, 2):
+            raise ValueError(f"a feature has 1 or 2 lines, got {self.lines}")
+        if self.is_reversed and self.lines != 1:
+            raise ValueError("a self-reversed line is one line")
+        for name, allowed in (
+            ("shape", ("voigt", "gaussian")),
+            ("kind", ("emission", "absorption")),
+            ("widths", ("equal", "tied", "free")),
+            ("self_reversal", ("excluded", "possible")),
+        ):
+            if getattr(feature, name) not in allowed:
+                known = " or ".join(repr(word) for word in allowed)
+                raise ValueError(f"{name} must be {known}, got {getattr(feature, name)!r}")
+        components(feature)  # refuses what is no pattern
+        if not feature.width_ratio > 0.0:
+            raise ValueError(f"width_ratio must be > 0, got {feature.width_ratio:g}")
 
     def _list_parameters(self) -> None:
         counts, feature = self.counts, self.feature
@@ -134,11 +128,20 @@ class FeatureModel:
             add("ratio", 0.0, inf)
             reach = self.x[-1] - self.x[0] if feature.reach_nm is None else feature.reach_nm
             add("separation_nm", -reach, reach)
-        add("sigma_nm", 0.1 * part / FWHM_PER_SIGMA, 4.0 * fwhm)
+        limit = feature.line_fwhm_limit_nm
+        narrow = 0.1 * (part if limit is None else min(part, limit)) / FWHM_PER_SIGMA
+        # of a reversed line the emitter is hot: a limit on the line's own width is not about it
+        broad = 4.0 * fwhm if limit is None or self.is_reversed else limit / FWHM_PER_SIGMA
+        add("sigma_nm", narrow, broad)
         if self.lines == 2 and feature.widths == "free":
-            add("sigma2_nm", 0.1 * part / FWHM_PER_SIGMA, 4.0 * fwhm)
+            add("sigma2_nm", narrow, broad)
+        if self.is_reversed:
+            shift = reversal.FURTHEST_SHIFT
+            add("reversal_depth", 0.0, reversal.HIGHEST_DEPTH)
+            add("absorber_width", reversal.NARROWEST, reversal.WIDEST)
+            add("absorber_shift", -shift, shift)
         if feature.shape == "voigt":
-            add("gamma_nm", 0.0, 2.0 * fwhm)
+            add("gamma_nm", 0.0, 2.0 * fwhm if limit is None or self.is_reversed else 0.5 * limit)
         for number in range(len(feature.known_lines_nm)):
             add(f"known_{number + 1}_area", 0.0)
         if feature.known_lines_nm:
@@ -187,28 +190,31 @@ class FeatureModel:
     def rate(self, values: FloatArray) -> FloatArray:
         """(N,) expected true rate, 1/s, at the visited positions, without Jacobian."""
         light, _ = self._light(values, derivatives=False)
-        gain = self.gains(values)[self.group]
-        made: FloatArray = np.maximum(gain * light + self.value(values, "dark_per_s"), _TINY)
+        made: FloatArray = np.maximum(
+            self.brightness(values) * light + self.value(values, "dark_per_s"), _TINY
+        )
         return made
 
     def live_s(self, values: FloatArray) -> FloatArray:
-        """(N,) gate time less the dead time of what was registered, s."""
+        """(N,) gate time less the dead time of what was registered, s, over the dispersion."""
         if self.sigma is not None:
             return self.gate
         tau = self.value(values, "dead_time_s", self.counts.dead_time_s)
-        return live_time_s(self.observed, self.gate, dead_time_s=tau)
+        made: FloatArray = live_time_s(self.registered, self.gate, dead_time_s=tau) / self.dispersion
+        return made
 
     def evaluate(self, values: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Mean (N,) and Jacobian (N, P); with dark one more row."""
         light, d_light = self._light(values, derivatives=True)
-        gain = self.gains(values)[self.group]
+        gain = self.brightness(values)
         live = self.live_s(values)
         rate = gain * light + self.value(values, "dark_per_s")
         if self.sigma is None:
             rate = np.maximum(rate, _TINY)
         jacobian = (gain * live)[:, None] * d_light
+        exposed = live * (self.exposure * light)
         for number in range(1, self.counts.groups):
-            jacobian[:, self.index[f"gain_{number}"]] = np.where(self.group == number, live * light, 0.0)
+            jacobian[:, self.index[f"gain_{number}"]] = np.where(self.group == number, exposed, 0.0)
         if "dead_time_s" in self.index:
             jacobian[:, self.index["dead_time_s"]] = -rate * self.observed
         mean = rate * live
@@ -228,12 +234,38 @@ class FeatureModel:
         return float(made[0])
 
     def line_light(self, values: FloatArray) -> FloatArray:
-        """(N,) expected counts that belong to lines, without background and dark."""
+        """(N,) data expected from lines alone: what they give or, in absorption, take."""
         light, _ = self._light(values, derivatives=False)
         assert self.background is not None
         base, _ = self.background.evaluate(self.x, self._background_values(values))
-        made: FloatArray = self.gains(values)[self.group] * (light - base) * self.live_s(values)
+        made: FloatArray = self.brightness(values) * (self.sign * (light - base)) * self.live_s(values)
         return made
+
+    def added_light(self, values: FloatArray, places_nm: FloatArray) -> FloatArray:
+        """(M, N) how one more line of area 1 at each of M places would change the data; no shape modes."""
+        profile = bare_line(
+            self.x - places_nm[:, None],
+            self.feature,
+            sigma_nm=float(values[self.index["sigma_nm"]]),
+            gamma_nm=self.value(values, "gamma_nm"),
+        )
+        made: FloatArray = self.sign * profile * self.brightness(values) * self.live_s(values)
+        return made
+
+    @property
+    def sign(self) -> float:
+        """1 where lines add light, -1 where they take it."""
+        return -1.0 if self.feature.kind == "absorption" else 1.0
+
+    @property
+    def windows_nm(self) -> tuple[tuple[float, float], ...]:
+        """The ends of every stretch in which something was counted."""
+        if len(self.feature.windows_nm) < 2:
+            return ((float(self.x[0]), float(self.x[-1])),)
+        at = stretch_of(self.feature.windows_nm, self.x)
+        return tuple(
+            (float(self.x[at == k].min()), float(self.x[at == k].max())) for k in np.unique(at).tolist()
+        )
 
     def gains(self, values: FloatArray) -> FloatArray:
         """(G,) brightness of the dither groups against the first."""
@@ -241,6 +273,11 @@ class FeatureModel:
         if first is None:
             return np.ones(1)
         return np.concatenate([np.ones(1), values[first : first + self.counts.groups - 1]])
+
+    def brightness(self, values: FloatArray) -> FloatArray:
+        """(N,) gain of the position's dither group times its exposure."""
+        made: FloatArray = self.gains(values)[self.group] * self.exposure
+        return made
 
     def _background_values(self, values: FloatArray) -> FloatArray:
         assert self.background is not None
@@ -260,20 +297,30 @@ class FeatureModel:
             areas = np.concatenate([areas, values[first : first + known.size]])
             centres[self.lines :] += values[index["known_shift_nm"]]
         offsets = self.x - centres[:, None]
-        sigma, gamma = values[index["sigma_nm"]], self.value(values, "gamma_nm")
-        shapes = [self._shape(offsets, sigma, gamma, values, derivatives)]
-        owner = np.zeros(centres.size, dtype=np.int64)
-        if "sigma2_nm" in index:
-            owner[1] = 1
-            shapes.append(self._shape(offsets, values[index["sigma2_nm"]], gamma, values, derivatives))
-        value = np.stack([shapes[own].value[line] for line, own in enumerate(owner)])
+        casts = self._casts(centres.size)
+        shapes = [self._shape(offsets[cast.lines], cast, values, derivatives) for cast in casts]
+        value = np.empty(offsets.shape)
+        for cast, shape in zip(casts, shapes, strict=True):
+            value[cast.lines] = shape.value
         assert self.background is not None
         base, d_base = self.background.evaluate(self.x, self._background_values(values))
-        light = areas @ value + base
+        light = self.sign * (areas @ value) + base
         if not derivatives:
             return light, np.empty((0, 0))
         jacobian = np.zeros((self.x.size, len(self.names)))
-        slope = -np.stack([areas[line] * shapes[own].d_offset[line] for line, own in enumerate(owner)])
+        slope = np.empty(offsets.shape)
+        for cast, shape in zip(casts, shapes, strict=True):
+            mine = areas[cast.lines]
+            slope[cast.lines] = -mine[:, None] * shape.d_offset
+            jacobian[:, index[cast.sigma]] += cast.sigma_factor * (mine @ shape.d_sigma)
+            if "gamma_nm" in index:
+                jacobian[:, index["gamma_nm"]] += cast.gamma_factor * (mine @ shape.d_gamma)
+            if "skewness" in index:
+                jacobian[:, index["skewness"]] += mine @ shape.modes[0]
+                jacobian[:, index["kurtosis"]] += mine @ shape.modes[1]
+            if shape.d_reversal is not None:
+                start = index[reversal.NAMES[0]]
+                jacobian[:, start : start + 3] = (mine @ shape.d_reversal).T
         jacobian[:, index["area"]] = value[0]
         jacobian[:, index["centre_nm"]] = slope.sum(axis=0)
         if self.lines == 2:
@@ -283,58 +330,49 @@ class FeatureModel:
         if known.size:
             jacobian[:, first : first + known.size] = value[self.lines :].T
             jacobian[:, index["known_shift_nm"]] = slope[self.lines :].sum(axis=0)
-        for own, name in enumerate(("sigma_nm", "sigma2_nm")[: len(shapes)]):
-            mine = np.where(owner == own, areas, 0.0)
-            jacobian[:, index[name]] = mine @ shapes[own].d_sigma
-            if "gamma_nm" in index:
-                jacobian[:, index["gamma_nm"]] += mine @ shapes[own].d_gamma
-            if "skewness" in index:
-                jacobian[:, index["skewness"]] += mine @ shapes[own].modes[0]
-                jacobian[:, index["kurtosis"]] += mine @ shapes[own].modes[1]
+        if self.sign < 0.0:
+            jacobian = -jacobian
         start = index[self.background.names[0]]
         jacobian[:, start : start + d_base.shape[1]] = d_base
         return light, jacobian
 
-    def _shape(
-        self, offsets: FloatArray, sigma: float, gamma: float, values: FloatArray, derivatives: bool
-    ) -> _Shape:
-        boxes = self.feature.box_widths_nm
-        profile = line_profile(
-            offsets, sigma_nm=sigma, gamma_nm=gamma, box_widths_nm=boxes, derivatives=derivatives
-        )
-        if "skewness" not in self.index:
-            none = np.empty((0, *offsets.shape))
-            return _Shape(profile.value, profile.d_offset, profile.d_sigma, profile.d_gamma, none)
-        width = mode_width(sigma_nm=sigma, gamma_nm=gamma, box_widths_nm=boxes)
-        modes = shape_modes(offsets, width_nm=width)
-        skewness, kurtosis = values[self.index["skewness"]], values[self.index["kurtosis"]]
+    def _casts(self, lines: int) -> list[_Cast]:
+        """Which lines share a shape."""
+        rest = [line for line in range(lines) if line != 1 or self.lines == 1]
+        if self.is_reversed:
+            return [_Cast([0], reverses=True), *([_Cast(rest[1:])] if lines > 1 else [])]
+        if self.lines == 2 and self.feature.widths == "free":
+            return [_Cast(rest), _Cast([1], sigma="sigma2_nm")]
+        if self.lines == 2 and self.feature.widths == "tied":
+            ratio = self.feature.width_ratio
+            return [_Cast(rest), _Cast([1], sigma_factor=ratio, gamma_factor=ratio)]
+        return [_Cast(slice(None))]
 
-        def mixed(part: FloatArray) -> FloatArray:
-            made: FloatArray = skewness * part[0] + kurtosis * part[1]
-            return made
-
-        value = profile.value + mixed(modes.value)
-        if not derivatives:
-            return _Shape(value, value, value, value, modes.value)
-        d_width = mixed(modes.d_width)
-        return _Shape(
-            value=value,
-            d_offset=profile.d_offset + mixed(modes.d_offset),
-            d_sigma=profile.d_sigma + d_width * (sigma / width),
-            d_gamma=profile.d_gamma + d_width * (gamma / width * (2.0 / FWHM_PER_SIGMA) ** 2),
-            modes=modes.value,
+    def _shape(self, offsets: FloatArray, cast: _Cast, values: FloatArray, derivatives: bool) -> Shape:
+        modes = None
+        if "skewness" in self.index:
+            modes = (values[self.index["skewness"]], values[self.index["kurtosis"]])
+        start = self.index.get(reversal.NAMES[0], 0)
+        return observed_line(
+            offsets,
+            self.feature,
+            sigma_nm=cast.sigma_factor * values[self.index[cast.sigma]],
+            gamma_nm=cast.gamma_factor * self.value(values, "gamma_nm"),
+            mode_shares=modes,
+            reversal=values[start : start + 3] if cast.reverses else None,
+            derivatives=derivatives,
         )
 
 
 @dataclass(frozen=True, slots=True)
-class _Shape:
-    """Profile and modes together, (L, N) each; modes (2, L, N). Without derivatives only value and modes."""
+class _Cast:
+    """Lines of one shape, and where its widths come from."""
 
-    value: FloatArray
-    d_offset: FloatArray
-    d_sigma: FloatArray
-    d_gamma: FloatArray
-    modes: FloatArray
+    lines: list[int] | slice
+    sigma: str = "sigma_nm"
+    sigma_factor: float = 1.0
+    gamma_factor: float = 1.0
+    reverses: bool = False
 
 
 def vector(
@@ -363,6 +401,8 @@ def neutral(model: FeatureModel) -> FloatArray:
             made[place] = 0.2 * sigma
         elif name == "centre_nm":
             made[place] = feature.wavelength_nm
+        elif name == "absorber_width":
+            made[place] = 0.6
         elif name == "dead_time_s":
             made[place] = model.counts.dead_time_s
         elif name == "dark_per_s":

@@ -160,7 +160,7 @@ class ShapeModes:
     d_width: FloatArray
 
 
-def shape_modes(offset_nm: FloatArray, *, width_nm: float) -> ShapeModes:
+def shape_modes(offset_nm: FloatArray, *, width_nm: float | FloatArray) -> ShapeModes:
     """Gauss-Hermite functions He3(u) e^(-u^2/2) and He4(u) e^(-u^2/2), u = offset/width, of no area.
 
     Scaled so that a coefficient of 1 is as high as the peak of a Gaussian of the same width: a coefficient

@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import math
 import types
-from dataclasses import dataclass, fields, is_dataclass
+from dataclasses import MISSING, dataclass, fields, is_dataclass
 from typing import Any, TypeVar, Union, get_args, get_origin, get_type_hints
 
 from analysis.counting import Counts
@@ -26,6 +26,15 @@ class Feature:
     known_lines_nm : further lines of known place, strength free.
     shape_allowance : what may be left of the line-shape error, fraction of the peak.
     reach_nm : how far from the main line a second one is sought; None: as far as the data go.
+    kind : "emission" or "absorption" (lines that take light out of a continuum).
+    width_ratio : the second line's own width over the main one's where widths == "tied".
+    line_fwhm_limit_nm : source line and diffraction together are known not to exceed this; None: not known.
+    It bounds the Gaussian and the Lorentz part each: with both at their bounds a line is 1.64 times as broad.
+    pattern : hyperfine or isotope components of every line, (offset nm, strength); () is one component. A
+    line's place is the strength-weighted mean of its components, whatever the offsets count from.
+    windows_nm : the stretches that are swept, ascending; each has a background of its own; () is one.
+    self_reversal : "excluded", or "possible": then a self-reversed line is a rival of both claims.
+    periodic_errors_nm : what is left of the drive's periodic errors, (amplitude nm, period nm) each.
     """
 
     wavelength_nm: float
@@ -38,11 +47,21 @@ class Feature:
     known_lines_nm: tuple[float, ...] = ()
     shape_allowance: float = 0.01
     reach_nm: float | None = None
+    kind: str = "emission"
+    width_ratio: float = 1.0
+    line_fwhm_limit_nm: float | None = None
+    pattern: tuple[tuple[float, float], ...] = ()
+    windows_nm: tuple[tuple[float, float], ...] = ()
+    self_reversal: str = "excluded"
+    periodic_errors_nm: tuple[tuple[float, float], ...] = ()
 
 
 @dataclass(frozen=True, slots=True)
 class Question:
-    """One line or two, at what risks, and how well the separation must be known (None: no such goal)."""
+    """One line or two, at what risks, and how well the numbers must be known (None: no such goal).
+
+    resolving_power_at_least : wavelength over the observed FWHM of a line; a decision, yes or no.
+    """
 
     feature: Feature
     false_alarm: float
@@ -51,6 +70,8 @@ class Question:
     miss_probability: float
     separation_uncertainty_nm: float | None
     scale_relative_uncertainty: float
+    ratio_uncertainty: float | None = None
+    resolving_power_at_least: float | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -92,11 +113,21 @@ class FitSummary:
 
 @dataclass(frozen=True, slots=True)
 class Budget:
-    """Standard uncertainties of the separation by cause, nm; combined by their root sum of squares."""
+    """Standard uncertainties of the separation by cause, nm.
+
+    drive_nm : what is left of the drive's periodic errors, rms over their phase.
+    """
 
     statistics_nm: float
     shape_nm: float
     scale_nm: float
+    drive_nm: float = 0.0
+
+    @property
+    def combined_nm(self) -> float:
+        """Root sum of squares."""
+        parts = (self.statistics_nm, self.shape_nm, self.scale_nm, self.drive_nm)
+        return math.sqrt(sum(part**2 for part in parts))
 
 
 @dataclass(frozen=True, slots=True)
@@ -110,16 +141,50 @@ class Exclusion:
     ratio_limit: float | None
 
 
-@dataclass(frozen=True, slots=True)
-class Look:
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Claims:
+    """Evidence for each claim, natural logs.
+
+    log_e_* : now; bound_* : what it must reach; max_log_e_* : the most it reached, held against the bound.
+    log_numerator_* : sums of predictive log densities (see `analysis.evidence`). bound_reversed None:
+    self-reversal is excluded and nothing is claimed of it.
+    """
+
+    log_e_pair: float
+    log_e_single: float
+    bound_pair: float
+    bound_single: float
+    max_log_e_pair: float
+    max_log_e_single: float
+    log_numerator_pair: float
+    log_numerator_single: float
+    log_e_reversed: float = 0.0
+    bound_reversed: float | None = None
+    max_log_e_reversed: float = 0.0
+    log_numerator_reversed: float = 0.0
+
+    @property
+    def said(self) -> tuple[str, ...]:
+        """The claims that reached their bounds: of "pair", "single" and "self-reversed"."""
+        made = {
+            "pair": self.max_log_e_pair >= self.bound_pair,
+            "single": self.max_log_e_single >= self.bound_single,
+            "self-reversed": self.bound_reversed is not None
+            and self.max_log_e_reversed >= self.bound_reversed,
+        }
+        return tuple(name for name, is_said in made.items() if is_said)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Look(Claims):
     """The answer of one evaluation of the evidence; everything the next look needs is in it.
 
-    verdict : "single", "pair" or "undecided". The pair's numbers are given whatever the verdict.
+    verdict : "single", "pair", "self-reversed" or "undecided". The pair's numbers are given whatever it is.
     separation_nm : >= 0. centre_nm is the stronger line, second_nm the weaker one, ratio = weaker/stronger
-    in area. sigma_nm and gamma_nm are the Voigt part, fwhm_nm the whole observed single line.
-    log_e_* : evidence for each claim, natural log; max_* the running maxima held against bound_*.
-    log_numerator_* : sums of predictive log densities; the next block is predicted by the values of single
-    and pair, whose background is anchored at the two ends of window_nm.
+    in area. sigma_nm and gamma_nm are the Voigt part, fwhm_nm the whole observed width of one component of a
+    single line (pattern and dip left out), resolving_power the wavelength over it, source width included.
+    The next block is predicted by the values of single, pair and self_reversed (None: excluded), whose
+    background is anchored at the two ends of window_nm.
     """
 
     number: int
@@ -143,14 +208,9 @@ class Look:
     dark_u_per_s: float | None
     single: FitSummary
     pair: FitSummary
-    log_e_pair: float
-    log_e_single: float
-    bound_pair: float
-    bound_single: float
-    max_log_e_pair: float
-    max_log_e_single: float
-    log_numerator_pair: float
-    log_numerator_single: float
+    self_reversed: FitSummary | None = None
+    resolving_power: float | None = None
+    resolving_power_u: float | None = None
     window_nm: tuple[float, float]
     exclusion: tuple[Exclusion, ...]
     flags: tuple[str, ...]
@@ -190,10 +250,13 @@ def _decode(kind: Any, data: Any) -> Any:
         return tuple(_decode(item_kind, item) for item_kind, item in zip(kinds, data, strict=True))
     if is_dataclass(kind):
         hints = get_type_hints(kind)
-        if not isinstance(data, dict) or set(data) != set(hints):
-            odd = sorted(set(hints).symmetric_difference(data if isinstance(data, dict) else ()))
+        given = set(data) if isinstance(data, dict) else set()
+        # a record made before a field was there means its default
+        needed = {f.name for f in fields(kind) if f.default is MISSING and f.default_factory is MISSING}
+        odd = sorted((needed - given) | (given - set(hints)))
+        if odd:
             raise ValueError(f"{getattr(kind, '__name__', kind)}: keys missing or unknown: {', '.join(odd)}")
-        return kind(**{key: _decode(hints[key], data[key]) for key in hints})  # type: ignore[operator]
+        return kind(**{key: _decode(hints[key], data[key]) for key in data})  # type: ignore[operator]
     if kind is float:
         return float("nan") if data is None else float(data)
     if not isinstance(data, kind):

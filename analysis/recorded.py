@@ -12,12 +12,13 @@ from dataclasses import replace
 
 import numpy as np
 
-from analysis.answer import Claims, describe
+from analysis.answer import describe
+from analysis.candidates import Candidate, Candidates
 from analysis.counting import Counts, FloatArray
 from analysis.fit import FitResult
 from analysis.model import FeatureModel
-from analysis.question import Feature, Look, Question
-from analysis.starts import Bounds, fit_pair, fit_single
+from analysis.question import Claims, Feature, Look, Question
+from analysis.starts import fit_pair, fit_single, pairs_of_question
 
 RECORDED_ALLOWANCE = 0.02
 SLIT_SHARE = 0.7
@@ -31,14 +32,17 @@ FOREIGN_PEAK = 0.01
 CLEAR_PEAK = 0.1
 
 
-def guess_feature(counts: Counts, *, shape_allowance: float = RECORDED_ALLOWANCE) -> Feature:
+def guess_feature(
+    counts: Counts, *, shape_allowance: float = RECORDED_ALLOWANCE, kind: str = "emission"
+) -> Feature:
     """What a spectrum without a target shows: its main peak, FWHM above background, pixel width.
 
     The window is taken to be centred on the feature: the main peak is the highest in its middle half, and
     every peak there of a tenth of it or more belongs to the feature. A second line is sought within 3 FWHM
     of the main one, or as far as such a peak. ValueError without a peak or with fewer than 8 positions.
+    kind : "emission" or "absorption": then a peak is a dip.
     """
-    x, y = counts.wavelength_nm, counts.counts / np.maximum(counts.gate_s, 1e-300)
+    x, y = counts.wavelength_nm, _upright(counts.counts / np.maximum(counts.gate_s, 1e-300), kind)
     if x.size < 8:
         raise ValueError(f"a feature needs at least 8 positions, got {x.size}")
     quarter = x.size // 4
@@ -62,6 +66,7 @@ def guess_feature(counts: Counts, *, shape_allowance: float = RECORDED_ALLOWANCE
         line_fwhm_nm=float(np.sqrt(max(fwhm**2 - boxes, (0.3 * fwhm) ** 2))),
         shape_allowance=shape_allowance,
         reach_nm=reach,
+        kind=kind,
     )
 
 
@@ -82,7 +87,7 @@ def weigh_once(counts: Counts, question: Question) -> Look:
     model_1, model_2 = FeatureModel(softened, feature, 1), FeatureModel(softened, feature, 2)
     single = fit_single(model_1)
     pair = fit_pair(model_2, single)
-    within = Bounds(question.smallest_ratio, 1.0, question.smallest_separation_nm)
+    within = pairs_of_question(question)
     rival = fit_pair(model_2, single, within=within)
     if rival.log_likelihood > pair.log_likelihood:
         pair = rival
@@ -100,14 +105,15 @@ def weigh_once(counts: Counts, question: Question) -> Look:
         # driven to the end of its reach it is the flank of a foreign line
         flags.append("foreign-line")
         e_pair = 0.0
+    bound_pair = -float(np.log(question.false_alarm))
     claims = Claims(
         log_e_pair=e_pair,
         log_e_single=e_single,
-        bound_pair=-np.log(question.false_alarm),
-        bound_single=-np.log(question.miss_probability),
+        bound_pair=bound_pair,
+        bound_single=-float(np.log(question.miss_probability)),
         max_log_e_pair=e_pair,
         # two lines outside the question (fainter or closer) leave "single" unsaid where they are claimed
-        max_log_e_single=e_single if e_pair < -np.log(question.false_alarm) else 0.0,
+        max_log_e_single=e_single if e_pair < bound_pair else 0.0,
         log_numerator_pair=0.0,
         log_numerator_single=0.0,
     )
@@ -122,10 +128,7 @@ def weigh_once(counts: Counts, question: Question) -> Look:
         number=1,
         question=question,
         claims=claims,
-        model_1=model_1,
-        model_2=model_2,
-        single=single,
-        pair=pair,
+        candidates=Candidates(Candidate(model_1, single), Candidate(model_2, pair)),
         flags=flags,
         spread=float(np.sqrt(scatter)),
         residual_limit=2.5 * feature.shape_allowance,
@@ -151,7 +154,8 @@ def _soften(counts: Counts, feature: Feature) -> Counts:
         sigma = np.sqrt(np.maximum(smooth, max(_quiet_sd(y, smooth) ** 2, 1.0)))
     else:
         sigma = counts.sigma
-    allowed = 0.5 * feature.shape_allowance * np.sqrt(np.maximum(y, 0.0) * max(float(y.max()), 0.0))
+    strong = y if feature.kind == "emission" else _upright(y, feature.kind) + float(np.percentile(y, 90.0))
+    allowed = 0.5 * feature.shape_allowance * np.sqrt(np.maximum(strong, 0.0) * max(float(strong.max()), 0.0))
     return replace(counts, sigma=np.hypot(sigma, allowed))
 
 
@@ -167,11 +171,11 @@ def _cut(counts: Counts, feature: Feature) -> Counts:
     """The positions up to the valleys towards peaks beyond the reach; at least 5 on either side stay."""
     if feature.reach_nm is None:
         return counts
-    x, y = counts.wavelength_nm, counts.counts
+    x, y = counts.wavelength_nm, _upright(counts.counts, feature.kind)
     main = int(np.argmin(np.abs(x - feature.wavelength_nm)))
     first, last = 0, x.size
     base = float(np.percentile(y, 10.0))
-    noise = np.sqrt(max(base, 1.0)) if counts.sigma is None else float(np.median(counts.sigma))
+    noise = np.sqrt(max(abs(base), 1.0)) if counts.sigma is None else float(np.median(counts.sigma))
     threshold = base + FOREIGN_PEAK * (float(y[main]) - base) + 5.0 * noise
     peaks = _peaks(np.concatenate([[-np.inf], y, [-np.inf]]), threshold) - 1
     for peak in peaks.tolist():
@@ -185,11 +189,16 @@ def _cut(counts: Counts, feature: Feature) -> Counts:
     return replace(
         counts,
         wavelength_nm=x[part],
-        counts=y[part],
+        counts=counts.counts[part],
         gate_s=counts.gate_s[part],
         group=counts.group[part],
         sigma=None if counts.sigma is None else counts.sigma[part],
     )
+
+
+def _upright(y: FloatArray, kind: str) -> FloatArray:
+    """The readings, so that lines stand up."""
+    return -y if kind == "absorption" else y
 
 
 def _peaks(y: FloatArray, threshold: float) -> np.ndarray[tuple[int], np.dtype[np.int64]]:

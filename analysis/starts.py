@@ -6,22 +6,28 @@ follow by linear least squares from one Gram matrix; the best few different plac
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
+from itertools import product
+from typing import TypeAlias
 
 import numpy as np
-from numpy.typing import NDArray
 
+from analysis.background import stretch_of
 from analysis.counting import FloatArray
 from analysis.fit import FitResult, fit
-from analysis.model import FeatureModel, LinearBackground, neutral
-from analysis.profile import FWHM_PER_SIGMA, line_profile
+from analysis.gram import gram_of
+from analysis.model import FeatureModel, neutral
+from analysis.profile import FWHM_PER_SIGMA
+from analysis.question import Question
+from analysis.reversal import NAMES
 
-MOST_PLACES = 60
-FINE = 400
 PAIR_STARTS = 4
 KNOWN_ZONE_FWHM = 0.3
 """A second line is not sought closer than this to a known line: there it could only replace it."""
 _ROUGH_STEPS = 6
+
+Limits: TypeAlias = tuple[FloatArray, FloatArray]
 
 
 @dataclass(frozen=True, slots=True)
@@ -33,12 +39,19 @@ class Bounds:
     smallest_separation_nm: float
 
 
+def pairs_of_question(question: Question) -> Bounds:
+    """Every pair that `single` denies."""
+    # with widths of their own, either of the two may be the weaker one
+    most = 1.0 / question.smallest_ratio if question.feature.widths == "tied" else 1.0
+    return Bounds(question.smallest_ratio, most, question.smallest_separation_nm)
+
+
 def fit_single(model: FeatureModel, *, tolerance: float = 1e-6) -> FitResult:
     """The best single line. ValueError if the model is not of one line with the built-in background."""
     found = [start for width in _widths(model) for start in _single_starts(model, width)]
     # nothing stands out: begin with no line at all
     starts = _choose(model, found, most=2) or [np.clip(neutral(model), model.lower, model.upper)]
-    return _polish(model, starts, [(model.lower, model.upper)] * len(starts), tolerance)
+    return _polish(model, starts, [_in_window(model, start) for start in starts], tolerance)
 
 
 def fit_pair(
@@ -49,6 +62,45 @@ def fit_pair(
     found = [start for width in widths for start in _pair_starts(model, width, within)]
     starts = _choose(model, found, most=PAIR_STARTS) or [_beside(model, single, within)]
     return _polish(model, starts, [_limits(model, start, within) for start in starts], tolerance)
+
+
+def fit_reversed(
+    model: FeatureModel, *, at_least: Mapping[str, float] | None = None, tolerance: float = 1e-6
+) -> FitResult:
+    """The best self-reversed line. at_least : lower bounds of parameters, of a composite rival."""
+    low, high = model.lower.copy(), model.upper.copy()
+    for name, value in (at_least or {}).items():
+        low[model.index[name]] = min(max(low[model.index[name]], value), high[model.index[name]])
+    starts = _reversed_starts(model, low, high)
+    limits = []
+    for start in starts:
+        left, right = _in_window(model, start)
+        limits.append((np.maximum(low, left), np.minimum(high, right)))
+    return _polish(model, starts, limits, tolerance)
+
+
+def _reversed_starts(model: FeatureModel, low: FloatArray, high: FloatArray) -> list[FloatArray]:
+    """For each of a few depths of the layer the best of a coarse choice of widths and places.
+
+    Sought afresh, over the whole window: a single line that fits badly stands on one of the two humps.
+    """
+    feature, starts = model.feature, []
+    expected, gamma = _widths(model)[0]
+    broad = feature.fwhm_nm / FWHM_PER_SIGMA
+    for depth in (1.0, 3.5):
+        found = []
+        for sigma, absorber in product((expected, 0.6 * broad, 1.2 * broad, 2.4 * broad), (0.4, 0.8)):
+            layer = np.clip((depth, absorber, 0.0), *(bound[_layer(model)] for bound in (low, high)))
+            width = (float(np.clip(sigma, low[model.index["sigma_nm"]], None)), gamma)
+            found += _single_starts(model, width, layer)
+        starts += _choose(model, found, most=1)
+    return starts or [np.clip(neutral(model), low, high)]
+
+
+def _layer(model: FeatureModel) -> slice:
+    """Where the three numbers of a reversing layer stand."""
+    first = model.index[NAMES[0]]
+    return slice(first, first + len(NAMES))
 
 
 def _beside(model: FeatureModel, single: FitResult, within: Bounds | None) -> FloatArray:
@@ -98,15 +150,29 @@ def _known_gaps(model: FeatureModel) -> list[float]:
     return [known - model.feature.wavelength_nm for known in model.feature.known_lines_nm]
 
 
-def _limits(model: FeatureModel, start: FloatArray, within: Bounds | None) -> tuple[FloatArray, FloatArray]:
-    low, high = model.lower.copy(), model.upper.copy()
+def _window(model: FeatureModel, place_nm: float) -> tuple[float, float]:
+    windows = model.windows_nm
+    return windows[int(stretch_of(windows, np.array([place_nm]))[0])]
+
+
+def _in_window(model: FeatureModel, start: FloatArray) -> Limits:
+    """The model's bounds, the main line kept to the window in which it starts."""
+    low, high, centre = model.lower.copy(), model.upper.copy(), model.index["centre_nm"]
+    left, right = _window(model, start[centre])
+    low[centre], high[centre] = max(low[centre], left), min(high[centre], right)
+    return low, high
+
+
+def _limits(model: FeatureModel, start: FloatArray, within: Bounds | None) -> Limits:
+    low, high = _in_window(model, start)
     ratio, separation = model.index["ratio"], model.index["separation_nm"]
     # the second line stays where there are data: outside it could be of any strength; where the window was
     # cut at the foot of a foreign line, inside by half a FWHM
     centre = start[model.index["centre_nm"]]
     margin = 0.0 if model.feature.reach_nm is None else 0.5 * model.feature.fwhm_nm
-    low[separation] = max(low[separation], model.x[0] + margin - centre)
-    high[separation] = min(high[separation], model.x[-1] - margin - centre)
+    left, right = _window(model, centre + start[separation])
+    low[separation] = max(low[separation], left + margin - centre)
+    high[separation] = min(high[separation], right - margin - centre)
     for gap in _known_gaps(model):
         if start[separation] > gap:
             low[separation] = max(low[separation], gap + KNOWN_ZONE_FWHM * model.feature.fwhm_nm)
@@ -124,7 +190,7 @@ def _limits(model: FeatureModel, start: FloatArray, within: Bounds | None) -> tu
 def _polish(
     model: FeatureModel,
     starts: list[FloatArray],
-    limits: list[tuple[FloatArray, FloatArray]],
+    limits: list[Limits],
     tolerance: float,
 ) -> FitResult:
     rough = [
@@ -142,83 +208,28 @@ def _polish(
     return max(finals, key=lambda made: made.log_likelihood)
 
 
-@dataclass(frozen=True, slots=True)
-class _Gram:
-    """Normal equations over a dictionary of columns: M places, K known lines for each, the background."""
-
-    places: FloatArray
-    matrix: FloatArray
-    target: FloatArray
-    known: NDArray[np.int64]
-    base: NDArray[np.int64]
-
-    def solve(self, columns: NDArray[np.int64], tied: float | None = None) -> tuple[FloatArray, FloatArray]:
-        """Solutions (S, C) and reductions of chi square (S,) for S choices of C columns.
-
-        tied : the second column is added to the first with this factor and dropped.
-        """
-        matrix = self.matrix[columns[:, :, None], columns[:, None, :]]
-        target = self.target[columns]
-        if tied is not None:
-            mix = np.eye(columns.shape[1])
-            mix[1, 0] = tied
-            mix = np.delete(mix, 1, axis=1)
-            matrix = mix.T @ matrix @ mix
-            target = target @ mix
-        size = np.einsum("sii->si", matrix)
-        matrix = matrix + np.eye(matrix.shape[1]) * (1e-9 * size[:, :, None] + 1e-300)
-        made = np.linalg.solve(matrix, target[:, :, None])[:, :, 0]
-        return made, np.sum(made * target, axis=1)
-
-
-def _gram(model: FeatureModel, width: tuple[float, float]) -> _Gram:
-    feature, x = model.feature, model.x
-    if not isinstance(model.background, LinearBackground):
-        raise ValueError("a fit with a background of its own needs its own start: use analysis.fit.fit")
-    span = x[-1] - x[0]
-    number = int(np.clip(np.ceil(4.0 * span / feature.fwhm_nm) + 1, 9, MOST_PLACES))
-    places = np.linspace(x[0], x[-1], number)
-    known = np.asarray(feature.known_lines_nm) - feature.wavelength_nm
-    centres = np.concatenate([places, (places[:, None] + known).ravel()])
-    live = model.live_s(neutral(model))
-    # a fine table read linearly is enough for starts
-    fine = np.linspace(0.0, np.abs(centres - 0.5 * (x[0] + x[-1])).max() + 0.5 * span, FINE)
-    table = line_profile(
-        fine,
-        sigma_nm=width[0],
-        gamma_nm=width[1],
-        box_widths_nm=feature.box_widths_nm,
-        derivatives=False,
-    ).value
-    lines = np.interp(np.abs(x - centres[:, None]), fine, table)
-    _, base = model.background.evaluate(x, np.zeros(len(model.background.names)))
-    columns = np.vstack([lines, base.T]) * live
-    sigma = np.sqrt(np.maximum(model.observed, 1.0)) if model.sigma is None else model.sigma
-    scaled = columns / sigma
-    first = number * (1 + known.size)
-    return _Gram(
-        places=places,
-        matrix=scaled @ scaled.T,
-        target=scaled @ (model.observed / sigma),
-        known=number + np.arange(number * known.size).reshape(number, known.size),
-        base=first + np.arange(base.shape[1]),
-    )
-
-
-def _single_starts(model: FeatureModel, width: tuple[float, float]) -> list[tuple[float, FloatArray]]:
-    gram = _gram(model, width)
+def _single_starts(
+    model: FeatureModel, width: tuple[float, float], layer: FloatArray | None = None
+) -> list[tuple[float, FloatArray]]:
+    gram = gram_of(model, width, layer)
     main = np.arange(gram.places.size)
     columns = np.column_stack([main, gram.known, np.tile(gram.base, (main.size, 1))])
     solution, gain = gram.solve(columns)
     gain = np.where(solution[:, 0] > 0.0, gain, -np.inf)
     order = np.argsort(-gain, kind="stable")
-    return [(float(gain[k]), _assemble(model, width, gram.places[k], None, solution[k])) for k in order[:2]]
+    starts = []
+    for k in order[:2]:
+        start = _assemble(model, width, gram.places[k], None, solution[k])
+        if layer is not None:
+            start[_layer(model)] = layer
+        starts.append((float(gain[k]), start))
+    return starts
 
 
 def _pair_starts(
     model: FeatureModel, width: tuple[float, float], within: Bounds | None
 ) -> list[tuple[float, FloatArray]]:
-    gram = _gram(model, width)
+    gram = gram_of(model, width)
     number = np.arange(gram.places.size)
     main, second = np.repeat(number, number.size), np.tile(number, number.size)
     smallest = 0.0 if within is None else within.smallest_separation_nm
@@ -229,10 +240,14 @@ def _pair_starts(
         keep &= away > KNOWN_ZONE_FWHM * model.feature.fwhm_nm
     keep &= apart <= model.upper[model.index["separation_nm"]]
     main, second = main[keep], second[keep]
-    columns = np.column_stack([main, second, gram.known[main], np.tile(gram.base, (main.size, 1))])
+    columns = np.column_stack(
+        [main, gram.second + second, gram.known[main], np.tile(gram.base, (main.size, 1))]
+    )
     solution, gain = gram.solve(columns)
     ratio = solution[:, 1] / np.where(solution[:, 0] > 0.0, solution[:, 0], np.inf)
-    low, high = (0.0, 1.0) if within is None else (within.lowest_ratio, within.highest_ratio)
+    # with one width for both, a second line stronger than the main one is the same pair the other way round
+    most = np.inf if model.feature.widths == "tied" else 1.0
+    low, high = (0.0, most) if within is None else (within.lowest_ratio, within.highest_ratio)
     gain = np.where((solution[:, 0] > 0.0) & (ratio >= low) & (ratio <= high), gain, -np.inf)
     if within is not None:
         for factor in (low, high):

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import itertools
 import json
+from dataclasses import replace
 from typing import Any
 
 import pytest
@@ -14,12 +15,12 @@ from analysis.allocate import Visit, Window, next_sweep
 from daq.tally import FEWEST_POSITIONS, Snapshot, Tally
 
 WINDOW = Window(
-    lowest_steps=100, highest_steps=172, step_steps=8, groups=4, dwell_ns=500, dark_ns=2000
+    stretches=((100, 172),), step_steps=8, groups=4, dwell_ns=500, dark_ns=2000
 )  # 72 steps wide: the first comb ends on the window's last step
 
 
 def changed(**changes: Any) -> Window:
-    return Window(**(WINDOW.to_json() | changes))
+    return replace(WINDOW, **changes)
 
 
 def light_of(sweep: tuple[Visit, ...]) -> list[Visit]:
@@ -28,7 +29,7 @@ def light_of(sweep: tuple[Visit, ...]) -> list[Visit]:
 
 windows = st.builds(
     lambda lowest, step, groups, more: changed(
-        lowest_steps=lowest, highest_steps=lowest + step + more, step_steps=step, groups=min(groups, step)
+        stretches=((lowest, lowest + step + more),), step_steps=step, groups=min(groups, step)
     ),
     st.integers(-1000, 1000),
     st.integers(1, 40),
@@ -103,7 +104,7 @@ def test_the_groups_interleave_evenly(window: Window) -> None:
 def test_any_run_of_sweeps_samples_the_step_evenly(power: int, first: int, length: int) -> None:
     """Of any n successive sweeps (groups a power of two) each eighth of a step gets its share, within two."""
     groups = 2**power
-    window = changed(step_steps=32, groups=groups, highest_steps=400)
+    window = changed(step_steps=32, groups=groups, stretches=((100, 400),))
     starts = [next_sweep(window, number=first + i)[0].steps - 100 for i in range(length)]
     cells = min(8, groups)
     for cell in range(cells):
@@ -114,8 +115,8 @@ def test_any_run_of_sweeps_samples_the_step_evenly(power: int, first: int, lengt
 @pytest.mark.parametrize(
     ("changes", "named"),
     [
-        ({"highest_steps": 107}, "highest_steps"),
-        ({"highest_steps": 99}, "highest_steps"),
+        ({"stretches": ((100, 107),)}, "stretch must end"),
+        ({"stretches": ((100, 99),)}, "stretch must end"),
         ({"groups": 0}, "groups"),
         ({"groups": 9}, "groups"),
         ({"step_steps": 0}, "step_steps"),
@@ -131,7 +132,7 @@ def test_windows_that_make_no_sense_are_refused(changes: dict[str, int], named: 
 
 
 @pytest.mark.parametrize(
-    "changes", [{"highest_steps": 108}, {"groups": 1}, {"groups": 8}, {"dwell_ns": 1}, {"dark_ns": 0}]
+    "changes", [{"stretches": ((100, 108),)}, {"groups": 1}, {"groups": 8}, {"dwell_ns": 1}, {"dark_ns": 0}]
 )
 def test_the_narrowest_windows_allowed_have_a_point_in_every_sweep(changes: dict[str, int]) -> None:
     """The limits themselves are allowed, and no sweep is empty at them."""
@@ -142,7 +143,7 @@ def test_the_narrowest_windows_allowed_have_a_point_in_every_sweep(changes: dict
 def test_a_window_comes_back_from_json() -> None:
     """The plan stands in the journal's head as JSON."""
     assert Window.from_json(json.loads(json.dumps(WINDOW.to_json()))) == WINDOW
-    other = {"lowest_steps": 1, "highest_steps": 9, "step_steps": 3, "groups": 2, "dwell_ns": 5, "dark_ns": 6}
+    other = {"stretches": [[1, 9]], "step_steps": 3, "groups": 2, "dwell_ns": 5, "dark_ns": 6}
     assert Window.from_json(other).to_json() == other
 
 
@@ -189,7 +190,7 @@ def test_sums_are_kept_per_position_and_group_and_dark_apart() -> None:
     light = [(5, 1, True, 10, 100), (5, 0, True, 4, 40), (-2, 1, True, 7, 70), (5, 1, True, 3, 30)]
     dark = [(5, 1, False, 2, 400), (9, 0, False, 1, 300)]
     snapshot = tally_of([*light, *dark]).snapshot()
-    assert snapshot == Snapshot(((-2, 1, 7, 70), (5, 0, 4, 40), (5, 1, 13, 130)), 3, 700)
+    assert snapshot == Snapshot(((-2, 1, 7, 70, 0), (5, 0, 4, 40, 0), (5, 1, 13, 130, 0)), 3, 700)
 
 
 @settings(deadline=None, derandomize=True)
@@ -224,7 +225,7 @@ def test_a_tally_goes_its_own_way_after_it_was_included() -> None:
     whole, part = Tally(), tally_of([(0, 0, True, 5, 50)])
     whole.include(part)
     part.add(steps=0, group=0, light=True, counts=1, gate_ns=10)
-    assert whole.snapshot().rows == ((0, 0, 5, 50),)
+    assert whole.snapshot().rows == ((0, 0, 5, 50, 0),)
 
 
 @settings(deadline=None, derandomize=True)
@@ -240,7 +241,7 @@ def test_a_snapshot_does_not_grow_with_the_tally() -> None:
     tally = tally_of([(0, 0, True, 5, 50)])
     snapshot = tally.snapshot()
     tally.add(steps=0, group=0, light=True, counts=1, gate_ns=10)
-    assert snapshot.rows == ((0, 0, 5, 50),)
+    assert snapshot.rows == ((0, 0, 5, 50, 0),)
 
 
 def test_a_dozen_positions_with_light_can_be_weighed() -> None:
