@@ -11,6 +11,8 @@ from typing import Annotated, Literal
 from pydantic import Field
 
 from daq.target import LoadedTarget, load_target
+from drivers.bench import ByHand
+from drivers.bench_optics import SlitUm
 from drivers.errors import SettingsError
 from drivers.settings import ListOf, Name, StrictModel, load_toml, parse
 from drivers.slug import slug_of
@@ -28,6 +30,14 @@ class NightLimits(StrictModel):
     time_s: Annotated[float, Field(gt=0.0, le=1e7)] | None = None
 
 
+class Confirmed(ByHand):
+    """`[confirmed]`: who has looked at the bench, and what stands there; keys as in `[by_hand]`."""
+
+    operator: Name
+    entrance_slit_um: SlitUm | None = None
+    exit_slit_um: SlitUm | None = None
+
+
 class Night(StrictModel):
     """A whole night file."""
 
@@ -35,6 +45,7 @@ class Night(StrictModel):
     name: Name
     runs: Annotated[ListOf[Run], Field(min_length=1, max_length=1000)]
     limits: NightLimits = NightLimits()
+    confirmed: Confirmed | None = None
 
     def cross_checks(self) -> Iterator[tuple[str, str]]:
         if not slug_of(self.name):

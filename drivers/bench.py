@@ -1,6 +1,6 @@
 """The bench: one instrument as it is set up, read from a TOML file.
 
-Angles are in degrees here because a person types them; everything else works in radians.
+What its devices set, the devices answer for. What a person has set, a person confirms: `[by_hand]`.
 """
 
 from __future__ import annotations
@@ -15,21 +15,43 @@ from typing import Annotated, Any, Literal
 
 from pydantic import Field
 
-from drivers.errors import SettingsError
-from drivers.settings import (
-    Factory,
-    ListOf,
-    Name,
-    Steps,
-    StrictModel,
-    load_toml,
-    parse,
-    toml_table,
+from drivers.bench_devices import (
+    Ambient,
+    Detector,
+    Drive,
+    FilterWheel,
+    LampTurret,
+    MotorisedSlits,
+    Reference,
+    Shutter,
 )
+from drivers.bench_optics import (
+    NO_FILTER,
+    ConcaveOptics,
+    FilterBand,
+    GratingOptics,
+    LittrowOptics,
+    Optics,
+    PlaneOptics,
+    TableOptics,
+)
+from drivers.errors import SettingsError
+from drivers.settings import Factory, ListOf, Name, StrictModel, load_toml, parse, toml_table
 from drivers.slug import slug_of
 
-LARGEST_DEAD_FRACTION = 0.3
-"""Registered rate times dead time beyond which the dead-time correction is not to be trusted."""
+__all__ = [
+    "NO_FILTER",
+    "Bench",
+    "ByHand",
+    "ConcaveOptics",
+    "GratingOptics",
+    "LittrowOptics",
+    "LoadedBench",
+    "PlaneOptics",
+    "TableOptics",
+    "load_bench",
+    "read_bench",
+]
 
 
 class Time(StrictModel):
@@ -37,6 +59,7 @@ class Time(StrictModel):
 
     kind: Literal["real", "virtual"] = "real"
     start_utc: datetime.datetime | None = None
+    """When virtual time begins."""
 
     def cross_checks(self) -> Iterator[tuple[str, str]]:
         if self.kind == "virtual" and self.start_utc is None:
@@ -64,103 +87,46 @@ class World(StrictModel):
 
     factory: Factory
     options: dict[str, Any] = Field(default_factory=dict)
-
-
-class PlaneOptics(StrictModel):
-    """`[optics]` with a plane grating turned under a constant included angle."""
-
-    mount: Literal["plane"]
-    groove_density_per_mm: Annotated[float, Field(gt=0.0, le=20_000.0)]
-    ruled_width_mm: Annotated[float, Field(gt=0.0, le=1_000.0)]
-    focal_length_mm: Annotated[float, Field(gt=0.0, le=100_000.0)]
-    included_angle_deg: Annotated[float, Field(ge=0.0, lt=180.0)]
-    order: Annotated[int, Field(ge=1, le=100)]
-    entrance_slit_um: Annotated[float, Field(gt=0.0, le=20_000.0)]
-    exit_slit_um: Annotated[float, Field(gt=0.0, le=20_000.0)]
-
-
-class TableOptics(StrictModel):
-    """`[optics]` of a recorded spectrum: step k of the drive stands at row k of the CSV file."""
-
-    mount: Literal["table"]
-    spectrum: Annotated[str, Field(min_length=1, max_length=1000)]
+    """What is true in it, for the factory's own model."""
 
 
 class Scale(StrictModel):
     """`[scale]`: how well the dispersion is known, as a fraction of a separation."""
 
     relative_uncertainty: Annotated[float, Field(ge=0.0, le=0.1)] = 1e-4
+    """Standard uncertainty of the dispersion, as a fraction: of a separation, that fraction."""
 
 
 class Shape(StrictModel):
     """`[shape]`: what is left of the line-shape error, as a fraction of the peak."""
 
     allowance: Annotated[float, Field(ge=0.0, le=0.2)] = 0.01
+    """Largest misfit of the line shape, as a fraction of the peak; it floors what is claimed."""
 
 
-class Drive(StrictModel):
-    """`[drive]`: the grating drive; positions are whole steps."""
+class ByHand(StrictModel):
+    """`[by_hand]`: what a person has set; confirmed when a night begins, and recorded."""
 
-    factory: Factory
-    steps_per_radian: Annotated[float, Field(gt=0.0, le=1e12)] | None = None
-    zero_order_steps: Steps | None = None
-    lowest_steps: Steps
-    highest_steps: Steps
-    backlash_steps: Annotated[int, Field(ge=0, le=10_000_000)] = 0
-    settle_s: Annotated[float, Field(ge=0.0, le=60.0)] = 0.05
-    microstep_period_steps: Annotated[int, Field(ge=2, le=1_000_000)] | None = None
-    move_timeout_s: Annotated[float, Field(gt=0.0, le=3600.0)] = 60.0
-    options: dict[str, Any] = Field(default_factory=dict)
-
-    def cross_checks(self) -> Iterator[tuple[str, str]]:
-        if self.lowest_steps >= self.highest_steps:
-            yield "lowest_steps", f"must be below highest_steps = {self.highest_steps}"
-        elif self.backlash_steps >= self.highest_steps - self.lowest_steps:
-            room = self.highest_steps - self.lowest_steps
-            yield "backlash_steps", f"must be below the drive's whole travel of {room} steps"
-
-
-class Detector(StrictModel):
-    """`[detector]`: a photon counter."""
-
-    factory: Factory
-    dead_time_ns: Annotated[float, Field(ge=0.0, le=1e6)]
-    dead_time_uncertainty_ns: Annotated[float, Field(ge=0.0, le=1e6)] = 0.0
-    highest_rate_per_s: Annotated[float, Field(gt=0.0, le=1e12)]
-    longest_gate_s: Annotated[float, Field(gt=0.0, le=1.0)] = 1.0
-    options: dict[str, Any] = Field(default_factory=dict)
-
-    def cross_checks(self) -> Iterator[tuple[str, str]]:
-        if self.dead_time_uncertainty_ns > self.dead_time_ns:
-            yield "dead_time_uncertainty_ns", f"must be at most dead_time_ns = {self.dead_time_ns:g}"
-        dead = self.highest_rate_per_s * self.dead_time_ns / 1e9
-        if dead > LARGEST_DEAD_FRACTION:
-            most = LARGEST_DEAD_FRACTION * 1e9 / self.dead_time_ns
-            yield (
-                "highest_rate_per_s",
-                f"with dead_time_ns = {self.dead_time_ns:g} the counter would be dead {dead:.0%} of the time;"
-                f" must be at most {most:.3g}, in 1/s",
-            )
-
-
-class Shutter(StrictModel):
-    """`[shutter]`: between the lamp and the entrance slit, or before the detector."""
-
-    factory: Factory
-    options: dict[str, Any] = Field(default_factory=dict)
-
-
-class Ambient(StrictModel):
-    """`[ambient]`: a sensor of the air; without it the bench assumes 20 C, 101 325 Pa, 50 %."""
-
-    factory: Factory
-    options: dict[str, Any] = Field(default_factory=dict)
+    filter: Name | None = None
+    """A name of [[filters]], or none."""
+    lamp: Name | None = None
+    """Which lamp is lit."""
+    lamp_current_a: Annotated[float, Field(gt=0.0, le=1000.0)] | None = None
+    high_voltage_v: Annotated[float, Field(gt=0.0, le=100_000.0)] | None = None
+    """Of the detector."""
+    gain: Annotated[float, Field(gt=0.0, le=1e12)] | None = None
+    """Of the detector's amplifier."""
+    attenuator: Name | None = None
+    lamp_serial: Name | None = None
+    grating_serial: Name | None = None
+    detector_serial: Name | None = None
 
 
 class Paths(StrictModel):
     """`[paths]`: folders, relative to the bench file, that hold a lab's own drivers."""
 
     drivers: ListOf[Annotated[str, Field(min_length=1, max_length=1000)]] = ()
+    """Folders, relative to this file."""
 
 
 class Bench(StrictModel):
@@ -170,52 +136,105 @@ class Bench(StrictModel):
     name: Name
     time: Time = Time()
     world: World | None = None
-    optics: Annotated[PlaneOptics | TableOptics, Field(discriminator="mount")]
+    optics: Optics
+    filters: ListOf[FilterBand] = ()
     scale: Scale = Scale()
     shape: Shape = Shape()
     drive: Drive
     detector: Detector
+    reference: Reference | None = None
     shutter: Shutter
+    filter: FilterWheel | None = None
+    lamp: LampTurret | None = None
+    slits: MotorisedSlits | None = None
     ambient: Ambient | None = None
+    by_hand: ByHand = ByHand()
     paths: Paths = Paths()
 
     def cross_checks(self) -> Iterator[tuple[str, str]]:
         if not slug_of(self.name):
             yield "name", "must hold a letter or a digit: files are named after it"
-        drive = self.drive
-        if isinstance(self.optics, PlaneOptics):
-            yield from self._plane_checks()
-        else:
-            for key in ("steps_per_radian", "zero_order_steps"):
-                if getattr(drive, key) is not None:
-                    yield f"drive.{key}", "only for mount = 'plane'; in a recorded spectrum step k is row k"
-            if drive.lowest_steps < 0:
-                yield "drive.lowest_steps", "must not be below 0 with mount = 'table': rows count from 0"
-
-    def _plane_checks(self) -> Iterator[tuple[str, str]]:
-        drive = self.drive
-        if drive.steps_per_radian is None:
-            yield "drive.steps_per_radian", "missing; mount = 'plane' needs the drive's steps per radian"
+        yield from self._filter_checks()
+        if self.lamp is not None and self.by_hand.lamp is not None:
+            yield "by_hand.lamp", "the table [lamp] sets it; leave it out here"
+        if isinstance(self.optics, GratingOptics):
+            yield from self._slit_checks(self.optics)
+            yield from self._travel_checks()
             return
-        zero = self.zero_order_steps
+        drive = self.drive
+        for key in ("steps_per_radian", "steps_per_unit_sine", "zero_order_steps"):
+            if getattr(drive, key) is not None:
+                yield f"drive.{key}", "only for a grating; in a recorded spectrum step k is row k"
+        for key in ("filters", "filter", "slits"):
+            if getattr(self, key):
+                yield key, "only for a grating; a recorded spectrum has neither slits nor filters"
+        if drive.lowest_steps < 0:
+            yield "drive.lowest_steps", "must not be below 0 with mount = 'table': rows count from 0"
+
+    def _filter_checks(self) -> Iterator[tuple[str, str]]:
+        names = [band.name for band in self.filters]
+        twice = sorted({name for name in names if names.count(name) > 1})
+        if twice:
+            yield "filters", f"names {twice[0]!r} twice; each filter once"
+        if self.filter is not None:
+            if not names:
+                yield "filters", "missing; the wheel of [filter] needs its filters as [[filters]]"
+            if self.by_hand.filter is not None:
+                yield "by_hand.filter", "the wheel of [filter] sets it; leave it out here"
+        elif self.by_hand.filter not in (None, NO_FILTER, *names):
+            known = ", ".join(repr(name) for name in (NO_FILTER, *names))
+            yield "by_hand.filter", f"is none of [[filters]]; allowed: {known}"
+
+    def _slit_checks(self, optics: GratingOptics) -> Iterator[tuple[str, str]]:
+        if self.slits is None:
+            return
+        for key in ("entrance_slit_um", "exit_slit_um"):
+            if not self.slits.narrowest_um <= getattr(optics, key) <= self.slits.widest_um:
+                between = (
+                    f"narrowest_um = {self.slits.narrowest_um:g} and widest_um = {self.slits.widest_um:g}"
+                )
+                yield f"optics.{key}", f"must lie between slits.{between}"
+
+    def _travel_checks(self) -> Iterator[tuple[str, str]]:
+        drive, zero = self.drive, self.zero_order_steps
+        key = "steps_per_radian" if drive.kind == "rotary" else "steps_per_unit_sine"
+        if drive.steps_per_unit is None:
+            yield f"drive.{key}", f"missing; a {drive.kind} drive of a grating needs its {key}"
+            return
         if not drive.lowest_steps <= zero <= drive.highest_steps:
             between = f"lowest_steps = {drive.lowest_steps} and highest_steps = {drive.highest_steps}"
             yield "drive.zero_order_steps", f"must lie between {between}"
             return
-        for key in ("lowest_steps", "highest_steps"):
-            rotation_rad = (getattr(drive, key) - zero) / drive.steps_per_radian
-            if abs(rotation_rad) >= math.pi / 2:
-                turned = math.degrees(rotation_rad)
-                yield (
-                    f"drive.{key}",
-                    f"would turn the grating by {turned:.4g} degrees from zero order; must stay within"
-                    f" 90 degrees (steps_per_radian = {drive.steps_per_radian:g})",
+        for end in ("lowest_steps", "highest_steps"):
+            turned = (getattr(drive, end) - zero) / drive.steps_per_unit
+            furthest = math.pi / 2 if drive.kind == "rotary" else 1.0
+            if abs(turned) >= furthest:
+                told = (
+                    f"{math.degrees(turned):.4g} degrees"
+                    if drive.kind == "rotary"
+                    else f"a sine of {turned:.4g}"
                 )
+                yield (
+                    f"drive.{end}",
+                    f"would turn the grating by {told} from zero order; must stay within"
+                    f" 90 degrees ({key} = {drive.steps_per_unit:g}{self._per_degree(turned)})",
+                )
+
+    def _per_degree(self, turned: float) -> str:
+        """What was probably meant where so many degrees would be within reach and radians are not."""
+        given = self.drive.steps_per_radian
+        if given is None or abs(math.radians(turned)) >= math.pi / 2:
+            return ""
+        return f"; if that is per degree, per radian it is {math.degrees(given):.8g}"
 
     @property
     def zero_order_steps(self) -> int:
         """Where zero order stands, in steps; 0 unless the file says otherwise."""
-        return self.drive.zero_order_steps or 0
+        return self.drive.zero_steps
+
+    def band(self, name: str) -> FilterBand | None:
+        """The filter of that name; None for no filter in the beam."""
+        return next((band for band in self.filters if band.name == name), None)
 
 
 @dataclass(frozen=True, slots=True)

@@ -19,6 +19,9 @@ UNITS = {
     "per_s": "1/s",
     "per_mm": "1/mm",
     "per_radian": "steps per radian",
+    "per_unit_sine": "steps per unit of the sine",
+    "charge_unit_c": "C",
+    "shot_noise_c": "C",
     "s": "s",
     "ns": "ns",
     "nm": "nm",
@@ -33,6 +36,8 @@ UNITS = {
     "c": "degrees Celsius",
     "k": "K",
     "m": "m",
+    "a": "A",
+    "v": "V",
 }
 
 
@@ -64,7 +69,8 @@ def complaints(model: type[BaseModel], data: Mapping[str, Any], error: Validatio
             given = value.get(tag) if isinstance(value, Mapping) else None
             lines.append(f"{path}: missing; {allowed}" if given is None else _join(path, given, allowed))
         elif kind == "worded":
-            lines.append(_join(place.path, value, entry["msg"]))
+            allowed = entry["msg"].partition(";")[0] if _comma(place.items) else entry["msg"]
+            lines.append(_join(place.path, value, allowed + _comma(place.items)))
         else:
             lines.append(_join(place.path, value, f"must be {place.allowed()}{_hint(value, place)}"))
     lines += [line for path, line in missing if path not in explained]
@@ -81,6 +87,7 @@ class _Place:
         self.key = ""
         self.annotation: Any = dict
         self.metadata: Sequence[Any] = ()
+        self.items: Sequence[Any] = ()
 
     @classmethod
     def find(cls, model: type[BaseModel], data: Any, loc: Sequence[int | str], *, keep_last: bool) -> _Place:
@@ -91,8 +98,8 @@ class _Place:
             if isinstance(part, int):
                 place.path += f"[{part}]"
                 place._enter(_items_of(place.annotation), ())
-                inside = isinstance(data, Sequence) and not isinstance(data, str)
-                data = data[part] if inside and part < len(data) else None
+                place.items = data if isinstance(data, Sequence) and not isinstance(data, str) else ()
+                data = place.items[part] if part < len(place.items) else None
             elif isinstance(data, Mapping) and (part in data or (last and keep_last)):
                 shown = part if re.fullmatch(r"[A-Za-z0-9_-]+", part) else repr(part)
                 place.path += f".{shown}" if place.path else shown
@@ -109,18 +116,19 @@ class _Place:
 
     def _enter(self, annotation: Any, metadata: Sequence[Any]) -> None:
         self.annotation, self.metadata = annotation, metadata
-        self.models = _models_in(annotation)
+        self.models = models_in(annotation)
 
     def allowed(self) -> str:
         text = _describe(self.annotation, self.metadata)
-        unit = _unit(self.key) if "number" in text else ""
+        unit = unit_of(self.key) if "number" in text else ""
         return f"{text}, in {unit}" if unit else text
 
 
-def _models_in(annotation: Any) -> Models:
+def models_in(annotation: Any) -> Models:
+    """The table models that a field's annotation holds, directly or as items."""
     if isinstance(annotation, type) and issubclass(annotation, BaseModel):
         return [annotation]
-    return [model for part in get_args(annotation) for model in _models_in(part)]
+    return [model for part in get_args(annotation) for model in models_in(part)]
 
 
 def _items_of(annotation: Any) -> Any:
@@ -214,8 +222,11 @@ def _number(value: Any) -> str:
     return str(value) if isinstance(value, int) else f"{value:g}"
 
 
-def _unit(key: str) -> str:
-    return next((unit for end, unit in UNITS.items() if key.endswith(f"_{end}")), "")
+def unit_of(key: str) -> str:
+    """The unit that a key's ending names; "" if it names none."""
+    if "_" not in key:
+        return ""
+    return next((unit for end, unit in UNITS.items() if f"_{key}".endswith(f"_{end}")), "")
 
 
 def _unknown_key(model: type[BaseModel], place: _Place) -> tuple[str, str]:
@@ -241,7 +252,7 @@ def _paths(model: type[BaseModel], prefix: str) -> Iterator[str]:
     for name, field in model.model_fields.items():
         yield prefix + name
         if get_origin(field.annotation) is not tuple:
-            for inner in _models_in(field.annotation):
+            for inner in models_in(field.annotation):
                 yield from _paths(inner, f"{prefix}{name}.")
 
 
@@ -254,15 +265,30 @@ def _hint(value: Any, place: _Place) -> str:
         except ValueError:
             return ""
         return f"; {value!r}: use a point, no quotes" if "," in value else f"; {value!r}: no quotes"
-    if isinstance(value, list) and "number" in wanted and len(value) == 2:
-        return f"; for a decimal number use a point: {value[0]}.{value[1]}"
+    if isinstance(value, list) and "number" in wanted:
+        return _comma(value)
     return ""
 
 
+def _comma(items: Sequence[Any]) -> str:
+    """A decimal comma makes a list of two whole numbers."""
+    if len(items) != 2 or any(type(item) is not int for item in items):
+        return ""
+    return f"; for a decimal number use a point: {items[0]}.{items[1]}"
+
+
 def _looked_up(value: Any, key: str) -> Any:
-    for part in key.split("."):
-        value = value.get(part) if isinstance(value, Mapping) else None
-    return value
+    """What stands at a dotted key, in which lists have their places ("windows[1].below_pm"); None for tables,
+    which are too long to be shown."""
+    for part in re.findall(r"[^.\[\]]+", key):
+        if isinstance(value, Mapping):
+            value = value.get(part)
+        elif isinstance(value, Sequence) and part.isdigit() and int(part) < len(value):
+            value = value[int(part)]
+        else:
+            return None
+    is_tables = isinstance(value, list) and any(isinstance(item, Mapping) for item in value)
+    return None if is_tables else value
 
 
 def _join(path: str, value: Any, text: str) -> str:

@@ -11,16 +11,30 @@ from collections.abc import Callable, Mapping
 from pathlib import Path
 from typing import Any
 
-from drivers.bench import LoadedBench
+from drivers.bench import Bench, LoadedBench
 from drivers.errors import GratingdError, SettingsError
-from drivers.protocols import Ambient, Detector, DriverContext, GratingDrive, Shutter
+from drivers.protocols import (
+    Ambient,
+    AnalogueDetector,
+    Detector,
+    DriverContext,
+    GratingDrive,
+    Selector,
+    Shutter,
+    Slits,
+)
 
 PROTOCOLS: Mapping[str, type] = {
     "drive": GratingDrive,
     "detector": Detector,
+    "reference": Detector,
     "shutter": Shutter,
+    "slits": Slits,
+    "filter": Selector,
+    "lamp": Selector,
     "ambient": Ambient,
 }
+"""What the device of each role must be able to do; an analogue detector has a protocol of its own."""
 
 
 def load_object(text: str, file: str, key: str) -> Callable[..., Any]:
@@ -52,7 +66,7 @@ def load_object(text: str, file: str, key: str) -> Callable[..., Any]:
 
 
 def load_factories(loaded: LoadedBench) -> dict[str, Callable[..., Any]]:
-    """The factories a bench names, by role: "world" (if any), "drive", "detector", "shutter", "ambient".
+    """The factories a bench names, by role: "world" and those of PROTOCOLS, if they are there.
 
     The bench's own driver folders go to the end of `sys.path`, so that they can hide nothing. Raises one
     SettingsError for all that cannot be loaded.
@@ -62,13 +76,7 @@ def load_factories(loaded: LoadedBench) -> dict[str, Callable[..., Any]]:
         if place not in sys.path:
             sys.path.append(place)
     bench = loaded.bench
-    named = {
-        "world": bench.world,
-        "drive": bench.drive,
-        "detector": bench.detector,
-        "shutter": bench.shutter,
-        "ambient": bench.ambient,
-    }
+    named = {"world": bench.world} | {role: getattr(bench, role) for role in PROTOCOLS}
     factories: dict[str, Callable[..., Any]] = {}
     problems: list[str] = []
     for role, table in named.items():
@@ -83,12 +91,25 @@ def load_factories(loaded: LoadedBench) -> dict[str, Callable[..., Any]]:
     return factories
 
 
-def make(factory: Callable[..., Any], options: Mapping[str, Any], context: DriverContext, file: str) -> Any:
+def protocol_of(role: str, bench: Bench) -> type | None:
+    """What the device of a role must be able to do on this bench; None for the world."""
+    if role == "detector" and bench.detector.kind == "analogue":
+        return AnalogueDetector
+    return PROTOCOLS.get(role)
+
+
+def make(
+    factory: Callable[..., Any],
+    options: Mapping[str, Any],
+    context: DriverContext,
+    file: str,
+    protocol: type | None,
+) -> Any:
     """Call a factory and look at what it returned.
 
     Raises SettingsError with the bench file and the key: for a mistake in the options, for a factory that
-    fails in a way of its own, and for a device that lacks what the protocol of its role asks. DeviceError
-    passes.
+    fails in a way of its own, and for a device that lacks what the protocol of its role asks (None: nothing).
+    DeviceError passes.
     """
     key = f"{context.role}.factory"
     try:
@@ -103,9 +124,9 @@ def make(factory: Callable[..., Any], options: Mapping[str, Any], context: Drive
         said = " ".join(f"{type(error).__name__}: {error}".split())
         problem = f"{key}: the factory {_name_of(factory)} failed: {said}{_place_of(error)}"
         raise SettingsError(file, [problem]) from error
-    if context.role in PROTOCOLS:
+    if protocol is not None:
         told = f"{key}: what the factory {_name_of(factory)} returned"
-        problems = [f"{told} {problem}" for problem in shortcomings(made, PROTOCOLS[context.role])]
+        problems = [f"{told} {problem}" for problem in shortcomings(made, protocol)]
         if problems:
             raise SettingsError(file, problems)
     return made

@@ -45,6 +45,15 @@ class Gate:
 
 
 @dataclass(frozen=True, slots=True)
+class Current:
+    """One reading of an analogue detector: the mean current over `gate_ns`, A; `flags` as a `Gate` has."""
+
+    mean_a: float
+    gate_ns: int
+    flags: tuple[str, ...] = ()
+
+
+@dataclass(frozen=True, slots=True)
 class AmbientReading:
     """Air at the bench."""
 
@@ -85,6 +94,30 @@ class Detector(Device, Protocol):
 
     async def gate(self, gate_ns: int, *, deadline_s: float) -> Gate:
         """Count for `gate_ns` (at most 1 s). Raises OverLight, LinkError, ReplyError."""
+        ...
+
+
+class AnalogueDetector(Device, Protocol):
+    """A photocurrent and whatever reads it."""
+
+    async def measure(self, gate_ns: int, *, deadline_s: float) -> Current:
+        """Mean current over `gate_ns` (at most 1 s). Raises OverLight, LinkError, ReplyError."""
+        ...
+
+
+class Selector(Device, Protocol):
+    """A wheel, turret or mirror with named positions: order-sorting filters, lamps."""
+
+    async def select(self, position: str, *, deadline_s: float) -> None:
+        """Returns when it stands there. Raises LimitError for a position it has not."""
+        ...
+
+
+class Slits(Device, Protocol):
+    """Motorised entrance and exit slit."""
+
+    async def set_widths(self, *, entrance_um: float, exit_um: float, deadline_s: float) -> None:
+        """Returns when both stand there. Raises LimitError outside what they can do."""
         ...
 
 

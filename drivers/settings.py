@@ -12,7 +12,15 @@ from collections.abc import Iterator, Mapping
 from pathlib import Path
 from typing import Annotated, Any, TypeVar
 
-from pydantic import AfterValidator, BaseModel, ConfigDict, Field, ValidationError, model_validator
+from pydantic import (
+    AfterValidator,
+    BaseModel,
+    ConfigDict,
+    Field,
+    ValidationError,
+    WithJsonSchema,
+    model_validator,
+)
 from pydantic_core import PydanticCustomError
 
 from drivers.complaints import complaints
@@ -53,15 +61,20 @@ def _one_line(text: str) -> str:
     return text
 
 
+FACTORY = r"[A-Za-z_]\w*(\.[A-Za-z_]\w*)*:[A-Za-z_]\w*"
+
+
 def _factory(text: str) -> str:
-    if not re.fullmatch(r"[A-Za-z_]\w*(\.[A-Za-z_]\w*)*:[A-Za-z_]\w*", text):
+    if not re.fullmatch(FACTORY, text):
         raise worded("must be 'module:factory', such as 'simulators.memory:counter'")
     return text
 
 
 Steps = Annotated[int, Field(ge=-2_000_000_000, le=2_000_000_000)]
 Name = Annotated[str, Field(min_length=1, max_length=80), AfterValidator(_one_line)]
-Factory = Annotated[str, AfterValidator(_factory)]
+Factory = Annotated[
+    str, AfterValidator(_factory), WithJsonSchema({"type": "string", "pattern": f"^{FACTORY}$"})
+]
 Item = TypeVar("Item")
 ListOf = Annotated[tuple[Item, ...], Field(strict=False)]
 """A TOML list, kept as a tuple; its items stay strict."""

@@ -4,15 +4,22 @@ from __future__ import annotations
 
 import csv
 import math
+import sys
 from pathlib import Path
 
 import pytest
 
+from daq.check import problems_of
+from daq.confirm import confirm
 from daq.files import KINDS, shipped_folder, shipped_names
+from daq.night import open_devices
 from daq.nightfile import load_night
+from daq.spectrum import read_spectrum
 from daq.target import load_target
 from drivers.bench import PlaneOptics, load_bench
-from drivers.factory import load_factories
+from drivers.clock import Clock, run_virtual
+from drivers.errors import SettingsError
+from drivers.factory import PROTOCOLS, load_factories
 
 FOLDER = shipped_folder()
 BENCHES = sorted((FOLDER / "benches").glob("*.toml"))
@@ -24,6 +31,19 @@ RECORDED = {
     "ar-801": "recorded-ar-801",
     "cd-361-recorded": "recorded-cd-361",
 }
+SKELETON = "lab-skeleton"
+"""A bench with real devices, to be copied: its drivers are still to be written."""
+
+FITTING = [
+    *((bench, target) for target, bench in RECORDED.items()),
+    ("concave-order-1", "na-589-pair"),
+    ("concave-order-2", "na-589-pair"),
+    ("concave-order-2", "na-589-order-2"),
+    ("littrow-analogue", "ar-696-single"),
+    ("goods-in", "hg-436-goods-in"),
+    (SKELETON, "ar-696-single"),
+]
+NIGHT_BENCHES = {"acceptance": "emberlight-3", "lamp-works": "emberlight-7"}
 
 
 def stem(path: Path) -> str:
@@ -41,12 +61,77 @@ def test_every_shipped_settings_file_is_of_a_kind_that_is_loaded_here() -> None:
     assert NIGHTS
 
 
-@pytest.mark.parametrize("path", BENCHES, ids=stem)
-def test_bench_loads_with_its_factories(path: Path) -> None:
+@pytest.mark.parametrize("path", [path for path in BENCHES if path.stem != SKELETON], ids=stem)
+def test_bench_loads_with_its_factories_and_every_device_can_be_made(path: Path) -> None:
+    """What the factories return is compared with the protocol of each role."""
     loaded = load_bench(path)
     factories = load_factories(loaded)
     assert {"drive", "detector", "shutter"} <= set(factories)
-    assert all(callable(factory) for factory in factories.values())
+    roles = [role for role in PROTOCOLS if getattr(loaded.bench, role) is not None]
+    assert set(factories) == {*roles, "world"}
+    assert loaded.bench.time.start_utc_ns is not None
+
+    async def open_all(clock: Clock) -> None:
+        devices = await open_devices(loaded, clock, seed=1)
+        assert await devices.close() == []
+
+    run_virtual(open_all, loaded.bench.time.start_utc_ns)
+
+
+def test_the_skeleton_loads_and_says_which_drivers_are_to_be_written(
+    monkeypatch: pytest.MonkeyPatch,
+) -> None:
+    monkeypatch.setattr(sys, "path", list(sys.path))
+    loaded = load_bench(FOLDER / "benches" / f"{SKELETON}.toml")
+    assert loaded.bench.world is None
+    assert loaded.bench.time.kind == "real"
+    with pytest.raises(SettingsError) as caught:
+        load_factories(loaded)
+    assert [problem.split(";")[0] for problem in caught.value.problems] == [
+        "drive.factory = 'lab_drive:open_drive': there is no module 'lab_drive'",
+        "detector.factory = 'lab_counter:open_counter': there is no module 'lab_counter'",
+        "shutter.factory = 'lab_counter:open_shutter': there is no module 'lab_counter'",
+    ]
+
+
+def test_the_shipped_benches_hold_every_mount_drive_detector_and_way_of_setting() -> None:
+    benches = [load_bench(path).bench for path in BENCHES]
+    assert {bench.optics.mount for bench in benches} == {"plane", "littrow", "concave", "table"}
+    assert {bench.drive.kind for bench in benches} == {"rotary", "sine-bar"}
+    assert {bench.detector.kind for bench in benches} == {"counter", "analogue"}
+    assert any(bench.filter and bench.lamp and bench.slits and bench.reference for bench in benches)
+    assert sum(bench.optics.mount != "table" for bench in benches) >= 5
+
+
+@pytest.mark.parametrize(("bench_stem", "target_stem"), FITTING)
+def test_a_target_has_no_problem_on_its_bench(bench_stem: str, target_stem: str) -> None:
+    bench = load_bench(FOLDER / "benches" / f"{bench_stem}.toml")
+    target = load_target(FOLDER / "targets" / f"{target_stem}.toml")
+    spectrum = None if bench.spectrum_path is None else read_spectrum(bench.spectrum_path)
+    assert [str(finding) for finding in problems_of(bench, target, spectrum)] == []
+
+
+@pytest.mark.parametrize("path", NIGHTS, ids=stem)
+def test_a_night_is_confirmed_and_fits_its_bench(path: Path) -> None:
+    bench = load_bench(FOLDER / "benches" / f"{NIGHT_BENCHES[path.stem]}.toml")
+    night = load_night(path)
+    assert confirm(bench, night, by=None, ask=None)["how"] == "night file"
+    for run in night.runs:
+        assert [str(finding) for finding in problems_of(bench, run.target, None)] == []
+
+
+def test_every_target_is_shipped_with_a_bench_that_it_fits() -> None:
+    in_nights = {run.target.path.stem for path in NIGHTS for run in load_night(path).runs}
+    assert {path.stem for path in TARGETS} == in_nights | {target for _, target in FITTING}
+
+
+@pytest.mark.parametrize(
+    "path", [path for path in BENCHES if not path.stem.startswith("recorded-")], ids=stem
+)
+def test_a_bench_with_lamps_carries_its_caution(path: Path) -> None:
+    text = path.read_text("utf-8").lower()
+    assert "local code" in text
+    assert "licensed" in text
 
 
 @pytest.mark.parametrize("path", TARGETS, ids=stem)
@@ -111,7 +196,7 @@ def test_recorded_target_lies_within_its_recording(target_stem: str, bench_stem:
         rows = list(csv.DictReader(stream))
     assert target.medium == "vacuum"
     wavelengths = [float(row["wavelength_vacuum_nm"]) for row in rows]
-    below_pm, above_pm = target.window.outright_pm or (math.nan, math.nan)
+    below_pm, above_pm = target.stretches[0][1].outright_pm or (math.nan, math.nan)
     assert wavelengths[0] <= target.wavelength_nm - below_pm * 1e-3
     assert target.wavelength_nm + above_pm * 1e-3 <= wavelengths[-1]
     drive = loaded.bench.drive
@@ -130,7 +215,8 @@ def test_recorded_target_lies_within_its_recording(target_stem: str, bench_stem:
 )
 def test_the_second_line_stands_well_inside_the_window(target_stem: str, second_nm: float) -> None:
     target = load_target(FOLDER / "targets" / f"{target_stem}.toml").target
-    assert target.window.outright_pm is not None
-    _, above_pm = target.window.outright_pm
+    outright_pm = target.stretches[0][1].outright_pm
+    assert outright_pm is not None
+    _, above_pm = outright_pm
     room_pm = target.wavelength_nm * 1e3 + above_pm - second_nm * 1e3
     assert room_pm > 3 * target.model.line_fwhm_pm

@@ -20,7 +20,7 @@ from daq.journal import read_journal
 from daq.records import Kind, Record
 from drivers.clock import RealClock
 from drivers.errors import DataError, LinkError, SettingsError
-from drivers.factory import load_object, make
+from drivers.factory import PROTOCOLS, load_object, make
 from drivers.protocols import DriverContext
 
 GOOD = {
@@ -66,7 +66,7 @@ def made(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Iterator[Callable[[
         (tmp_path / "lab_made.py").write_text(text, encoding="utf-8")
         factory = load_object("lab_made:open_it", "b.toml", f"{role}.factory")
         context = DriverContext(clock=RealClock(), role=role, seed=1, folder=str(tmp_path))
-        return make(factory, {"port": 1}, context, "b.toml")
+        return make(factory, {"port": 1}, context, "b.toml", PROTOCOLS.get(role))
 
     yield make_of
     sys.modules.pop("lab_made", None)
@@ -173,7 +173,8 @@ def test_a_bad_driver_is_told_on_the_command_line_and_nothing_is_measured(tmp_pa
         ("def open_it(options, context):\n    1 / 0\n", "failed: ZeroDivisionError: division by zero"),
     ]:
         driver.write_text(text)
-        told = complaint(gratingd("measure", "bench.toml", "target.toml", cwd=tmp_path), Exit.MISTAKE)
+        done = gratingd("measure", "bench.toml", "target.toml", "--confirm", cwd=tmp_path)
+        told = complaint(done, Exit.MISTAKE)
         (line,) = told.splitlines()
         assert line.startswith(f"gratingd: {tmp_path / 'bench.toml'}: shutter.factory: ")
         assert "the factory lab_shutter:open_it" in line
@@ -292,7 +293,7 @@ def records_of(folder: Path) -> list[Record]:
 
 def test_the_manuals_drive_runs_to_the_limit(tmp_path: Path, controller: Controller) -> None:
     lay_out(tmp_path, controller.port)
-    done = gratingd("measure", "bench.toml", "target.toml", cwd=tmp_path)
+    done = gratingd("measure", "bench.toml", "target.toml", "--confirm", cwd=tmp_path)
     assert done.returncode == 0, done.stderr
     assert "ready: drive Bellwether Motion Ratchet 2" in done.stderr
     assert "time-limit" in done.stdout
@@ -321,7 +322,7 @@ def test_the_manuals_drive_survives_a_link_that_is_cut(tmp_path: Path, controlle
 
     controller.script = script
     lay_out(tmp_path, controller.port)
-    done = gratingd("measure", "bench.toml", "target.toml", cwd=tmp_path)
+    done = gratingd("measure", "bench.toml", "target.toml", "--confirm", cwd=tmp_path)
     assert done.returncode == 0, done.stderr
     faults = [record.body for record in records_of(tmp_path) if record.kind == Kind.FAULT]
     assert [fault["error"] for fault in faults] == ["LinkError", "ReplyError"]
@@ -332,7 +333,7 @@ def test_the_manuals_drive_survives_a_link_that_is_cut(tmp_path: Path, controlle
 def test_a_fault_that_the_manuals_drive_reports_stops_the_run(tmp_path: Path, controller: Controller) -> None:
     controller.script = lambda controller, command: "ERR stalled" if command.startswith("MOVE") else None
     lay_out(tmp_path, controller.port)
-    done = gratingd("measure", "bench.toml", "target.toml", cwd=tmp_path)
+    done = gratingd("measure", "bench.toml", "target.toml", "--confirm", cwd=tmp_path)
     assert done.returncode == Exit.BENCH_FAULT, done.stderr
     assert "is answered by ERR stalled" in done.stderr
     assert controller.heard[-1] == "STOP"
@@ -350,7 +351,7 @@ def test_ctrl_c_stops_the_manuals_drive_in_a_long_move(tmp_path: Path, controlle
 
     controller.script = script
     lay_out(tmp_path, controller.port)
-    with start("measure", "bench.toml", "target.toml", cwd=tmp_path) as child:
+    with start("measure", "bench.toml", "target.toml", "--confirm", cwd=tmp_path) as child:
         try:
             assert stuck.wait(60.0)
             child.send_signal(signal.SIGINT)

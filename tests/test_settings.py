@@ -18,6 +18,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from pydantic import Field
+from settings_samples import BENCH, BY_HAND, CONCAVE, EQUIPPED, LITTROW, TABLE, TARGET, changed
 
 from daq.nightfile import load_night
 from daq.target import Target, load_target, read_target
@@ -29,71 +30,6 @@ from drivers.protocols import DriverContext
 from drivers.settings import LARGEST_FILE_BYTES, ListOf, StrictModel, parse, parse_options
 from drivers.slug import slug_of
 
-BENCH = """\
-format = 1
-name = "Test bench"
-[time]
-kind = "virtual"
-start_utc = 2031-02-11T18:00:00Z
-[optics]
-mount = "plane"
-groove_density_per_mm = 1200.0
-ruled_width_mm = 96.0
-focal_length_mm = 870.0
-included_angle_deg = 22.0
-order = 1
-entrance_slit_um = 20.0
-exit_slit_um = 20.0
-[scale]
-relative_uncertainty = 2e-5
-[shape]
-allowance = 0.01
-[drive]
-factory = "collections:OrderedDict"
-steps_per_radian = 1.1e6
-zero_order_steps = 0
-lowest_steps = -1000
-highest_steps = 900000
-backlash_steps = 400
-settle_s = 0.05
-microstep_period_steps = 64
-move_timeout_s = 60.0
-[detector]
-factory = "collections:Counter"
-dead_time_ns = 30.0
-dead_time_uncertainty_ns = 2.0
-highest_rate_per_s = 2e6
-longest_gate_s = 1.0
-[shutter]
-factory = "collections:deque"
-"""
-TABLE = (
-    BENCH[: BENCH.index("mount")]
-    + 'mount = "table"\nspectrum = "s.csv"\n'
-    + BENCH[BENCH.index("[scale]") :].replace("steps_per_radian = 1.1e6\nzero_order_steps = 0\n", "")
-).replace("lowest_steps = -1000", "lowest_steps = 0")
-
-TARGET = """\
-format = 1
-name = "Hg 313 nm pair"
-wavelength_air_nm = 313.155
-[window]
-half_width_fwhm = 4.0
-[model]
-line_fwhm_pm = 1.5
-known_lines_air_nm = [313.9]
-[sweep]
-dwell_s = 0.2
-step_pm = 2.0
-[goal]
-separation_uncertainty_pm = 0.5
-[goal.decide]
-false_alarm = 1e-3
-[limits]
-time_s = 1800.0
-light_s = 900.0
-"""
-
 MISTAKES = [
     pytest.param(kind, row, id=f"{kind}: {row['what']}")
     for kind, rows in tomllib.loads(
@@ -101,7 +37,15 @@ MISTAKES = [
     ).items()
     for row in rows
 ]
-SAMPLES = {"target": (read_target, TARGET), "bench": (read_bench, BENCH), "table_bench": (read_bench, TABLE)}
+SAMPLES = {
+    "target": (read_target, TARGET),
+    "bench": (read_bench, BENCH),
+    "table_bench": (read_bench, TABLE),
+    "equipped_bench": (read_bench, EQUIPPED),
+    "bench_by_hand": (read_bench, BY_HAND),
+    "concave_bench": (read_bench, CONCAVE),
+    "littrow_bench": (read_bench, LITTROW),
+}
 
 SYNTAX_MISTAKES: list[tuple[str, bytes, list[str]]] = [
     (
@@ -128,11 +72,6 @@ SYNTAX_MISTAKES: list[tuple[str, bytes, list[str]]] = [
 ]
 
 
-def changed(text: str, old: str, new: str) -> str:
-    assert text.count(old) >= 1, f"the sample file no longer holds {old!r}"
-    return text.replace(old, new, 1)
-
-
 def problems_of(reader: Any, text: str) -> list[str]:
     with pytest.raises(SettingsError) as caught:
         reader(text, "sample.toml")
@@ -147,7 +86,9 @@ def ids(rows: list[Any]) -> list[str]:
 
 def test_the_samples_themselves_are_right() -> None:
     assert read_bench(BENCH, "b").drive.highest_steps == 900_000
-    assert read_bench(TABLE, "b").optics.mount == "table"
+    mounts = {read_bench(text, "b").optics.mount for text in (TABLE, EQUIPPED, CONCAVE, LITTROW)}
+    assert mounts == {"table", "plane", "concave", "littrow"}
+    assert read_bench(BY_HAND, "b").by_hand.lamp == "mercury"
     assert read_target(TARGET, "t").wavelength_nm == 313.155
 
 
@@ -302,9 +243,9 @@ def turret(options: dict[str, Any], context: DriverContext) -> Turret:
 
 def test_a_drivers_own_options_are_told_with_the_bench_file_and_the_whole_key() -> None:
     context = DriverContext(clock=RealClock(), role="world", seed=1, folder=".")
-    assert make(turret, {"speed_per_s": 3}, context, "b.toml").speed_per_s == 3.0
+    assert make(turret, {"speed_per_s": 3}, context, "b.toml", None).speed_per_s == 3.0
     with pytest.raises(SettingsError) as caught:
-        make(turret, {"sped_per_s": 3, "label": 4}, context, "b.toml")
+        make(turret, {"sped_per_s": 3, "label": 4}, context, "b.toml", None)
     assert str(caught.value).splitlines() == [
         'b.toml: world.options.label = 4: must be text in quotes "..."',
         "b.toml: world.options.sped_per_s: unknown key 'sped_per_s'; did you mean 'speed_per_s'?",
@@ -399,7 +340,8 @@ def test_defaults_are_the_documented_ones() -> None:
     assert target.medium == "vacuum"
     assert target.wavelength_nm == 500.0
     assert isinstance(target.wavelength_nm, float)
-    assert (target.window.half_width, target.window.outright_pm) == (4.0, None)
+    ((centre_nm, window),) = target.stretches
+    assert (centre_nm, window.half_width, window.outright_pm) == (500.0, 4.0, None)
     model = target.model
     assert (model.line_fwhm_pm, model.shape, model.widths, model.background) == (
         1.0,
