@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import json
 from collections.abc import Mapping
-from dataclasses import dataclass, replace
+from dataclasses import asdict, dataclass, replace
 from pathlib import Path
 from typing import Any
 
@@ -13,14 +13,15 @@ import numpy as np
 from analysis.counting import Counts
 from analysis.question import Question, to_json
 from analysis.verdict import guess_feature, weigh_once
+from daq.export_notes import read_notes
+from daq.instrument import in_medium
 from daq.journal import is_journal
 from daq.looks import answer
 from daq.machine import Machine, MachineError, StartLook
-from daq.plan import in_medium
 from daq.records import Body, Kind
 from daq.runfile import RunData, read_run
 from daq.spectrum import Spectrum, read_spectrum
-from daq.summary import separation_in_all_units, verdict_fields
+from daq.summary import separation_in_all_units, summary_of_look, verdict_fields
 from daq.target import LoadedTarget
 from drivers.errors import DataError
 
@@ -84,7 +85,8 @@ def _summary(run: RunData, machine: Machine, look: dict[str, Any] | None) -> dic
     recorded = None if run.conclusion is None else run.conclusion["look"]
     return {
         "target": run.head["target"]["name"],
-        **verdict_fields(look),
+        "specimen_serial": run.head["specimen_serial"],
+        **summary_of_look(run.head, machine, look),
         "stop_reason": None if run.conclusion is None else run.conclusion["stop_reason"],
         "bench_time_s": machine.bench_ns / 1e9,
         "light_s": machine.light_ns / 1e9,
@@ -93,6 +95,7 @@ def _summary(run: RunData, machine: Machine, look: dict[str, Any] | None) -> dic
         "separation": None if look is None else separation_in_all_units(look, run.head["plan"]["medium"]),
         "run_id": run.head["run_id"],
         "reproduces": _reproduces(recorded, look),
+        "notes": [asdict(note) for note in read_notes(run.path)],
         "file": str(run.path.absolute()),
     }
 

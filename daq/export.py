@@ -11,6 +11,7 @@ when the file cannot be written or must not be replaced.
 
 from __future__ import annotations
 
+import contextlib
 import json
 import os
 import sys
@@ -23,6 +24,7 @@ import h5py
 
 from daq.export_columns import columns
 from daq.export_layout import Curve, FloatArray, RunWriter, Scale
+from daq.export_notes import Note, notes_in, put_note, turn
 from daq.journal import JournalError, decode, fsync_folder, newest_seq, read_rows
 from daq.records import Body, Kind, Record
 from daq.runfile import event_rows, open_run, same_columns, scan_block
@@ -50,7 +52,7 @@ class Exported:
 
 def plan_scale(plan: Body) -> Scale:
     """The wavelength scale that the head's plan describes."""
-    from daq.plan import mount_of
+    from daq.planned import mount_of
 
     return mount_of(plan)
 
@@ -59,12 +61,16 @@ def fitted_curve(look: Body, head: Body, snapshot: Snapshot, *, kind: str) -> Fl
     """The model rates of a look's fit (see `export_layout.Curve`)."""
     from analysis.curve import curve
     from analysis.question import Look, Question, from_json
+    from analysis.readings import AnalogueLaw
     from daq.looks import counts_of
+    from daq.planned import detector_law
 
     # what the record of a look carries beside the look itself
     plain = {key: value for key, value in look.items() if key not in ("horizon", "at_ns")}
     question = from_json(Question, head["question"])
-    return curve(from_json(Look, plain), question, counts_of(snapshot, head["plan"]), kind=kind)
+    made = curve(from_json(Look, plain), question, counts_of(snapshot, head["plan"]), kind=kind)
+    law = detector_law(head["plan"])
+    return law.recorded_per_s(made) if isinstance(law, AnalogueLaw) else made
 
 
 def export(
@@ -81,14 +87,30 @@ def export(
     still being written is exported up to the newest record found at the start. The same records give the same
     bytes. Raises JournalError if the journal cannot be read; ExportError if the file cannot be written, if it
     differs from the journal, or if a file stands there that must not be replaced: a complete one by an
-    incomplete or shorter one or by another run's, or one that is no run file.
+    incomplete or shorter one or by another run's, or one that is no run file. Notes that were added to the
+    file are carried over.
     """
     journal_path, out_path = Path(journal_path), Path(out_path)
     last_seq = newest_seq(journal_path)
     _clear_leftovers(out_path)
+    with contextlib.ExitStack() as held:
+        if out_path.exists():
+            with contextlib.suppress(OSError):  # where nothing can be locked, no note can be added either
+                held.enter_context(turn(out_path.parent))
+        return _export(journal_path, out_path, last_seq, complete, scale_of, curve)
+
+
+def _export(
+    journal_path: Path,
+    out_path: Path,
+    last_seq: int,
+    complete: bool | None,
+    scale_of: ScaleOf,
+    curve: Curve | None,
+) -> Exported:
     temporary = out_path.with_name(f"{out_path.name}.tmp-{os.getpid()}")
     try:
-        writer = _write(journal_path, last_seq, temporary, complete, scale_of, curve)
+        writer = _write(journal_path, last_seq, temporary, complete, scale_of, curve, _notes(out_path))
         done = Exported(
             out_path, _is_complete(writer, complete), writer.summary.records, writer.summary.points
         )
@@ -114,6 +136,7 @@ def _write(
     complete: bool | None,
     scale_of: ScaleOf,
     curve: Curve | None,
+    notes: tuple[Note, ...],
 ) -> RunWriter:
     try:
         # In memory, about 50 bytes a point: HDF5 that meets a full disk ends the process with a signal, a
@@ -124,12 +147,25 @@ def _write(
                 writer.add(Record(seq, kind, decode(journal_path, seq, kind, text)), text)
             scale = scale_of(writer.summary.head["plan"])
             writer.finish(complete=_is_complete(writer, complete), scale=scale, curve=curve)
+            for note in notes:
+                put_note(file, note)
             file.flush()
             temporary.write_bytes(file.id.get_file_image())
     except (KeyError, TypeError, ValueError, OverflowError) as error:
         why = f"no {error} in it" if isinstance(error, KeyError) else str(error)
         raise ExportError(f"{journal_path}: a record does not fit the layout of a run file: {why}") from error
     return writer
+
+
+def _notes(out_path: Path) -> tuple[Note, ...]:
+    """What a person wrote into the file that is about to be replaced; the journal does not know it."""
+    if not out_path.exists():
+        return ()
+    try:
+        with open_run(out_path) as file:
+            return notes_in(file)
+    except DataError as error:
+        raise ExportError(f"{error}; it is not replaced: move it away, then export again") from error
 
 
 def _is_complete(writer: RunWriter, wanted: bool | None) -> bool:

@@ -21,11 +21,16 @@ SWITCHES = ("light", "complete")
 AMBIENT = ("temperature_c", "pressure_pa", "humidity_percent")
 """Keys of a point's `ambient`, which may be absent; NaN stands for what was not read (JSON has no NaN)."""
 
-COLUMNS = ("seq", "session", *INTEGERS, *SWITCHES, "flags", *AMBIENT)
+REFERENCE = "reference_counts"
+"""Key of a point on a bench with a reference detector; NOT_COUNTED stands where there is none."""
+
+NOT_COUNTED = -1
+
+COLUMNS = ("seq", "session", *INTEGERS, *SWITCHES, REFERENCE, "flags", *AMBIENT)
 """Columns of a run file's scan: record number, number of the session, then the point itself."""
 
-_KEYS = frozenset((*INTEGERS, *SWITCHES, "flags", "ambient"))
-_NEEDED = _KEYS - {"ambient"}
+_KEYS = frozenset((*INTEGERS, *SWITCHES, REFERENCE, "flags", "ambient"))
+_NEEDED = _KEYS - {"ambient", REFERENCE}
 
 Columns = dict[str, NDArray[Any]]
 
@@ -47,6 +52,7 @@ def columns(rows: Sequence[tuple[int, int, Body]]) -> Columns:
         table[key] = np.array([body[key] for body in bodies], dtype=np.int64)
     for key in SWITCHES:
         table[key] = np.array([body[key] for body in bodies], dtype=np.int8)
+    table[REFERENCE] = np.array([body.get(REFERENCE, NOT_COUNTED) for body in bodies], dtype=np.int64)
     for key in AMBIENT:
         table[key] = np.array([_reading(body, key) for body in bodies], dtype=np.float64)
     return table
@@ -59,6 +65,8 @@ def bodies(table: Mapping[str, NDArray[Any]]) -> Iterator[dict[str, Any]]:
         point = dict(zip(COLUMNS, row, strict=True))
         body: dict[str, Any] = {key: point[key] for key in INTEGERS}
         body |= {key: bool(point[key]) for key in SWITCHES}
+        if point[REFERENCE] != NOT_COUNTED:
+            body[REFERENCE] = point[REFERENCE]
         body["flags"] = point["flags"].split(",") if point["flags"] else []
         ambient = {key: None if point[key] != point[key] else point[key] for key in AMBIENT}
         if any(value is not None for value in ambient.values()):
@@ -68,13 +76,16 @@ def bodies(table: Mapping[str, NDArray[Any]]) -> Iterator[dict[str, Any]]:
 
 def _check(seq: int, body: Body) -> None:
     if not _NEEDED <= body.keys() <= _KEYS:
-        odd = sorted((body.keys() - {"ambient"}) ^ _NEEDED)
+        odd = sorted((body.keys() - {"ambient", REFERENCE}) ^ _NEEDED)
         raise ValueError(f"record {seq} (point): keys {odd} are missing or have no column in a run file")
     for key in INTEGERS:
         if type(body[key]) is not int or not -(2**63) <= body[key] < 2**63:
             raise ValueError(
                 f"record {seq} (point): {key} must be a whole number of 64 bits, not {body[key]!r}"
             )
+    reference = body.get(REFERENCE, 0)
+    if type(reference) is not int or not 0 <= reference < 2**63:
+        raise ValueError(f"record {seq} (point): {REFERENCE} must be a whole number, not {reference!r}")
     for key in SWITCHES:
         if type(body[key]) is not bool:
             raise ValueError(f"record {seq} (point): {key} must be true or false, not {body[key]!r}")

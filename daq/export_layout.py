@@ -25,7 +25,9 @@ import h5py
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
+from analysis.readings import AnalogueLaw
 from daq.export_tree import EventWriter, PointWriter, group, put, table, tree, unit_of
+from daq.planned import detector_law, tally_of
 from daq.records import FORMAT, Body, Kind, Record
 from daq.tally import Snapshot, Tally
 
@@ -72,9 +74,11 @@ class Summary:
         match record.kind:
             case Kind.HEAD:
                 self.head = body
+                self.tally = tally_of(body["plan"])
                 self.latest_utc_ns = body["created_utc_ns"]
             case Kind.SESSION:
                 self.sessions.append(body)
+                self.tally.begin_session()
             case Kind.POINT:
                 self._point(body)
             case Kind.PREPARED:
@@ -92,13 +96,7 @@ class Summary:
         self.points += 1
         self.ambient = body.get("ambient") or self.ambient
         if not body["flags"]:  # a flagged reading is recorded, never summed
-            self.tally.add(
-                steps=body["steps"],
-                group=body["group"],
-                light=body["light"],
-                counts=body["counts"],
-                gate_ns=body["gate_ns"],
-            )
+            self.tally.add_point(body)
 
     @property
     def last_look(self) -> dict[str, Any] | None:
@@ -170,34 +168,44 @@ def _entry_fields(entry: h5py.Group, summary: Summary) -> None:
 
 def _data(entry: h5py.Group, summary: Summary, scale: Scale, curve: Curve | None) -> None:
     head, snapshot = summary.head, summary.tally.snapshot()
-    rows = np.array(snapshot.rows, dtype=np.int64).reshape(-1, 4)
+    rows = np.array(snapshot.rows, dtype=np.int64).reshape(-1, 5)
     wavelength_nm = np.asarray(scale.wavelength_nm(rows[:, 0]), dtype=np.float64)
     order = np.argsort(wavelength_nm, kind="stable")
-    steps, groups, counts, gate_ns = (rows[order, column] for column in range(4))
-    # live time of a non-paralysable counter: T - n tau
-    live_s = gate_ns * 1e-9 - counts * (head["plan"]["dead_time_ns"] * 1e-9)
+    steps, groups, counts, gate_ns, reference = (rows[order, column] for column in range(5))
+    law = detector_law(head["plan"])
+    if isinstance(law, AnalogueLaw):
+        live_s, what = gate_ns * 1e-9, "current in units of the recorded charge, dark included (1/s)"
+        u_counts = law.deviation(counts, live_s)
+    else:
+        # live time of a non-paralysable counter: T - n tau
+        live_s = gate_ns * 1e-9 - counts * law.dead_time_s
+        what = "rate, dead time removed, dark included (1/s)"
+        # no counts still leave an uncertainty: that of one count (common practice)
+        u_counts = np.sqrt(np.maximum(counts, 1))
     rate = counts / live_s
     data = group(entry, "data", "NXdata")
     data.attrs["signal"] = "rate"
     data.attrs["axes"] = ["wavelength"]
     put(data, "title", f"{head['target']['name']} ({head['run_id']})")
     put(data, "wavelength", wavelength_nm[order], units="nm", long_name=f"wavelength in {scale.medium} (nm)")
-    put(data, "rate", rate, units="1/s", long_name="rate, dead time removed, dark included (1/s)")
-    # no counts still leave an uncertainty: that of one count (common practice)
-    put(data, "rate_errors", np.sqrt(np.maximum(counts, 1)) / live_s, units="1/s")
+    put(data, "rate", rate, units="1/s", long_name=what)
+    put(data, "rate_errors", u_counts / live_s, units="1/s")
     put(data, "counts", counts, units="counts")
     put(data, "gate_ns", gate_ns)
     put(data, "steps", steps)
     put(data, "group", groups, long_name="dither group: each has a strength of its own in the fit")
+    if head["plan"]["reference"] is not None:
+        put(data, "reference_counts", reference, units="counts")
     put(data, "dark_counts", snapshot.dark_counts, units="counts")
     put(data, "dark_gate_ns", snapshot.dark_gate_ns)
     look = summary.last_look
     if curve is None or look is None or not len(rows):
         return
-    models = {kind: np.asarray(curve(look, head, snapshot, kind=kind)) for kind in ("single", "pair")}
+    kinds = ["single", "pair", *(["self-reversed"] if look.get("self_reversed") else [])]
+    models = {kind: np.asarray(curve(look, head, snapshot, kind=kind)) for kind in kinds}
     for kind, model in models.items():
-        put(data, f"model_{kind}", model, units="1/s", long_name=f"best {kind} (1/s)")
-    chosen = "single" if look["verdict"] == "single" else "pair"
+        put(data, f"model_{kind.replace('-', '_')}", model, units="1/s", long_name=f"best {kind} (1/s)")
+    chosen = look["verdict"] if look["verdict"] in models else "pair"
     put(data, "model", models[chosen], units="1/s", long_name=f"best {chosen} (1/s)")
     put(data, "residuals", rate - models[chosen], units="1/s", long_name="rate - model (1/s)")
     data.attrs["auxiliary_signals"] = ["model"]
@@ -225,7 +233,7 @@ def _instrument(entry: h5py.Group, summary: Summary) -> None:
     put(instrument, "name", str(head["bench"]["name"]))
     source = group(instrument, "source", "NXsource")
     put(source, "name", f"lamp under test: {head['target']['name']}")
-    _monochromator(instrument, bench.get("optics", {}), head)
+    _monochromator(instrument, bench.get("optics", {}) | head["plan"]["setup"], head)
     drive = group(instrument, "drive", "NXpositioner")
     settings = bench.get("drive", {})
     _identity(drive, identities.get("drive"))
@@ -235,8 +243,10 @@ def _instrument(entry: h5py.Group, summary: Summary) -> None:
         put(drive, "raw_value", summary.prepared["home_steps"], units="steps", long_name="position at home")
     detector = group(instrument, "detector", "NXdetector")
     _identity(detector, identities.get("detector"))
-    put(detector, "type", "photon counter")
-    put(detector, "dead_time", float(head["plan"]["dead_time_ns"]), units="ns")
+    table = head["plan"]["detector"]
+    put(detector, "type", {"counter": "photon counter", "analogue": "photocurrent"}[table["kind"]])
+    if table["kind"] == "counter":
+        put(detector, "dead_time", float(table["dead_time_ns"]), units="ns")
     ambient = group(instrument, "ambient", "NXenvironment")
     _identity(ambient, identities.get("ambient"))
     for name, kind in (

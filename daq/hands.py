@@ -11,24 +11,38 @@ import asyncio
 import logging
 import math
 import operator
-from collections.abc import Awaitable, Callable, Iterable, Mapping
-from dataclasses import asdict, dataclass, field
+from collections.abc import Awaitable, Callable, Mapping
+from dataclasses import asdict, dataclass, field, fields
 from typing import Any, TypeVar
 
 from analysis.allocate import SHORTEST_DWELL_NS, Visit
+from analysis.counting import LOAD_LIMIT
+from analysis.readings import check_reading, recorded_counts
 from daq.records import Kind
 from drivers.clock import Clock
 from drivers.errors import DeviceError, Halted, HardwareFault, LinkError, OverLight, ReplyError
-from drivers.protocols import Ambient, Detector, Device, GratingDrive, Shutter
+from drivers.protocols import (
+    Ambient,
+    AnalogueDetector,
+    Detector,
+    Device,
+    Gate,
+    GratingDrive,
+    Selector,
+    Shutter,
+    Slits,
+)
 
 log = logging.getLogger(__name__)
 
-HIGHEST_DEAD_TIME_FRACTION = 0.3
-"""Counts times dead time over gate time: above it the correction is not trusted and the point is flagged
-(common practice)."""
-
 ABANDON_AFTER_S = 1.0
 """A driver that overstays its own deadline by this much is no longer waited for."""
+
+LAMP_SIGMAS = 5.0
+"""A reference that is not this much above its dark sees no lamp."""
+
+SET_UP_WITHIN_S = 30.0
+"""A lamp mirror, a filter wheel or a pair of slits that is not in its place by then has a fault."""
 
 Answer = TypeVar("Answer")
 Ending = tuple[str, dict[str, Any]]
@@ -39,13 +53,17 @@ class Devices:
     """What a bench file names, opened."""
 
     drive: GratingDrive
-    detector: Detector
+    detector: Detector | AnalogueDetector
     shutter: Shutter
-    ambient: Ambient | None
+    ambient: Ambient | None = None
+    reference: Detector | None = None
+    slits: Slits | None = None
+    filter: Selector | None = None
+    lamp: Selector | None = None
 
     def by_role(self) -> dict[str, Device]:
-        every = {"drive": self.drive, "detector": self.detector, "shutter": self.shutter}
-        return every | ({"ambient": self.ambient} if self.ambient is not None else {})
+        every = {field.name: getattr(self, field.name) for field in fields(self)}
+        return {role: device for role, device in every.items() if device is not None}
 
     async def close(self) -> list[str]:
         """Release every link; what went wrong is returned, never raised."""
@@ -66,7 +84,11 @@ async def close_devices(devices: Mapping[str, Device]) -> list[str]:
 
 @dataclass(frozen=True, slots=True)
 class Grip:
-    """How this bench is to be handled. Times in ns and s, positions in steps."""
+    """How this bench is to be handled. Times in ns and s, positions in steps.
+
+    highest_rate_per_s : in recorded counts. charge_unit_c, highest_current_a : of an analogue detector, else
+    None. filter, lamp, entrance_slit_um, exit_slit_um : what its devices are to set, None without one.
+    """
 
     settle_ns: int
     backlash_steps: int
@@ -76,6 +98,13 @@ class Grip:
     dead_time_ns: float
     move_timeout_s: float
     reply_timeout_s: float = 5.0
+    charge_unit_c: float | None = None
+    highest_current_a: float | None = None
+    filter: str | None = None
+    lamp: str | None = None
+    entrance_slit_um: float | None = None
+    exit_slit_um: float | None = None
+    reference_dark_per_s: float = 0.0
 
 
 @dataclass(slots=True)
@@ -85,13 +114,17 @@ class _Dwell:
     counts: int = 0
     gate_ns: int = 0
     gates: int = 0
+    reference_counts: int = 0
     flags: set[str] = field(default_factory=set)
 
-    def add(self, counts: int, gate_ns: int, flags: Iterable[str]) -> None:
-        self.counts += counts
-        self.gate_ns += gate_ns
+    def add(self, gate: Gate, reference: Gate | None) -> None:
+        self.counts += gate.counts
+        self.gate_ns += gate.gate_ns
         self.gates += 1
-        self.flags.update(str(flag) for flag in flags)
+        self.flags.update(str(flag) for flag in gate.flags)
+        if reference is not None:
+            self.reference_counts += reference.counts
+            self.flags.update(f"reference-{flag}" for flag in reference.flags)
 
 
 def whole(role: str, value: object) -> int:
@@ -136,7 +169,8 @@ class Hands:
         await self._ask("drive", self._devices.drive.halt(), self._grip.reply_timeout_s)
 
     async def prepare(self) -> Ending:
-        """Shutter closed first, then who is there, then the drive's reference mark, then the air."""
+        """Shutter closed first, then who is there, then what is to be set (lamp, filter, slits), then the
+        drive's reference mark, then the air."""
         self._owed = self._position_steps = None  # preparing anew is the answer to what was owed
         self._shutter_is_open = None
         wait_s = self._grip.reply_timeout_s
@@ -149,6 +183,7 @@ class Hands:
             }
             if self._halted:
                 return Kind.HALTED, {"at_ns": self.at_ns()}
+            was_set = await self._set_up(SET_UP_WITHIN_S)
             wait_s = self._grip.move_timeout_s
             homed = await self._ask("drive", self._devices.drive.home(deadline_s=wait_s), wait_s)
             self._position_steps = whole("drive", homed.steps)
@@ -162,6 +197,7 @@ class Hands:
             "identities": identities,
             "home_steps": self._position_steps,
             "ambient": ambient,
+            **({"set": was_set} if was_set else {}),
         }
 
     async def point(self, *, sweep: int, index: int, visit: Visit) -> Ending:
@@ -178,6 +214,7 @@ class Hands:
             if not self._dwell_ends:
                 await self._set_shutter(visit.light)
                 await self._expose(visit, dwell)
+                self._guard_lamp(visit, dwell)
                 if not visit.light:
                     ambient = await self._read_ambient()
             if self._dwell_ends:
@@ -206,6 +243,8 @@ class Hands:
             "flags": sorted(dwell.flags),
             "complete": dwell.gate_ns > visit.dwell_ns - SHORTEST_DWELL_NS,
         }
+        if self._devices.reference is not None:
+            body["reference_counts"] = dwell.reference_counts
         if ambient is not None:
             body["ambient"] = ambient
         return Kind.POINT, body
@@ -232,6 +271,25 @@ class Hands:
         return error
 
     # ---- parts ------------------------------------------------------------------------------------------
+
+    async def _set_up(self, wait_s: float) -> dict[str, Any]:
+        """Lamp, filter and slits as this run wants them, where devices set them; what was set."""
+        devices, grip = self._devices, self._grip
+        was_set: dict[str, Any] = {}
+        for role, selector, position in (
+            ("lamp", devices.lamp, grip.lamp),
+            ("filter", devices.filter, grip.filter),
+        ):
+            if selector is not None and position is not None:
+                await self._ask(role, selector.select(position, deadline_s=wait_s), wait_s)
+                was_set[role] = position
+        slits = devices.slits
+        if slits is not None and grip.entrance_slit_um is not None and grip.exit_slit_um is not None:
+            entrance_um, exit_um = grip.entrance_slit_um, grip.exit_slit_um
+            call = slits.set_widths(entrance_um=entrance_um, exit_um=exit_um, deadline_s=wait_s)
+            await self._ask("slits", call, wait_s)
+            was_set |= {"entrance_slit_um": entrance_um, "exit_slit_um": exit_um}
+        return was_set
 
     async def _close_shutter(self, problems: list[str]) -> bool:
         wait_s = self._grip.reply_timeout_s
@@ -301,16 +359,44 @@ class Hands:
                 return
             asked_ns = min(self._grip.longest_gate_ns, visit.dwell_ns - dwell.gate_ns)
             wait_s = asked_ns * 1e-9 + self._grip.reply_timeout_s
-            gate = await self._ask(
-                "detector", self._devices.detector.gate(asked_ns, deadline_s=wait_s), wait_s
-            )
-            counts, gate_ns = whole("detector", gate.counts), whole("detector", gate.gate_ns)
-            if gate_ns <= 0 or counts < 0:
-                raise ReplyError("detector", f"it reports {counts} counts in a gate of {gate_ns} ns")
-            dwell.add(counts, gate_ns, gate.flags)
-            if counts * self._grip.dead_time_ns > HIGHEST_DEAD_TIME_FRACTION * gate_ns:
+            gate, reference = await self._gates(asked_ns, wait_s)
+            dwell.add(gate, reference)
+            if gate.counts * self._grip.dead_time_ns > LOAD_LIMIT * gate.gate_ns:
                 dwell.flags.add("dead-time")
-            await self._guard_light(counts / (gate_ns * 1e-9))
+            await self._guard_light(gate.counts / (gate.gate_ns * 1e-9))
+
+    async def _gates(self, asked_ns: int, wait_s: float) -> tuple[Gate, Gate | None]:
+        """One gate of the detector, and of the reference at the same time where there is one."""
+        reference = self._devices.reference
+        if reference is None:
+            return await self._gate(asked_ns, wait_s), None
+        seen = asyncio.ensure_future(self._gate(asked_ns, wait_s))
+        sent = asyncio.ensure_future(self._count("reference", reference, asked_ns, wait_s))
+        try:
+            return await asyncio.gather(seen, sent)
+        finally:  # what one of them raised is what is told; nobody waits for the other
+            seen.cancel()
+            sent.cancel()
+
+    async def _gate(self, asked_ns: int, wait_s: float) -> Gate:
+        detector, unit_c = self._devices.detector, self._grip.charge_unit_c
+        if unit_c is None:
+            return await self._count("detector", detector, asked_ns, wait_s)  # type: ignore[arg-type]
+        call = detector.measure(asked_ns, deadline_s=wait_s)  # type: ignore[union-attr]
+        current = await self._ask("detector", call, wait_s)
+        gate_ns = whole("detector", current.gate_ns)
+        if gate_ns <= 0:
+            raise ReplyError("detector", f"it reports a reading over {gate_ns} ns")
+        highest_a = self._grip.highest_current_a or math.inf
+        flags = check_reading(current.mean_a, highest_current_a=highest_a, flags=current.flags)
+        return Gate(recorded_counts(current.mean_a, gate_ns * 1e-9, charge_unit_c=unit_c), gate_ns, flags)
+
+    async def _count(self, role: str, counter: Detector, asked_ns: int, wait_s: float) -> Gate:
+        gate = await self._ask(role, counter.gate(asked_ns, deadline_s=wait_s), wait_s)
+        counts, gate_ns = whole(role, gate.counts), whole(role, gate.gate_ns)
+        if gate_ns <= 0 or counts < 0:
+            raise ReplyError(role, f"it reports {counts} counts in a gate of {gate_ns} ns")
+        return Gate(counts, gate_ns, gate.flags)
 
     async def _guard_light(self, rate_per_s: float) -> None:
         if rate_per_s > self._grip.highest_rate_per_s:
@@ -319,6 +405,19 @@ class Hands:
                 "detector",
                 f"{rate_per_s:.3g} counts per second, the bench allows {self._grip.highest_rate_per_s:.3g}; "
                 "narrow the slits or put in a filter",
+            )
+
+    def _guard_lamp(self, visit: Visit, dwell: _Dwell) -> None:
+        """A lamp that has gone out makes no spectrum; only the reference tells before 08:00."""
+        if self._devices.reference is None or not visit.light or dwell.gates == 0:
+            return
+        dark = self._grip.reference_dark_per_s * dwell.gate_ns * 1e-9
+        if dwell.reference_counts <= dark + LAMP_SIGMAS * math.sqrt(dark + LAMP_SIGMAS**2):
+            counts, gate_s = dwell.reference_counts, dwell.gate_ns * 1e-9
+            dwell.gates = 0  # what was counted without a lamp is no point
+            raise HardwareFault(
+                "reference",
+                f"it sees no lamp: {counts} counts in {gate_s:.3g} s; is the lamp lit, the way to it open?",
             )
 
     async def _set_shutter(self, is_open: bool) -> None:

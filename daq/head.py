@@ -32,12 +32,18 @@ def make_head(
     attempt: int,
     seed: int,
     operator: str | None,
+    confirmed: dict[str, Any] | None = None,
 ) -> dict[str, Any]:
     """Raises SettingsError when the bench cannot do what the target asks, DataError for its spectrum."""
     spectrum = None if bench.spectrum_path is None else read_spectrum(bench.spectrum_path)
     plan, question = draw_up(bench, target, spectrum)
     run_id = run_identity(
-        night_start_utc_ns=night_start_utc_ns, ordinal=ordinal, target_slug=target.slug, attempt=attempt
+        night_start_utc_ns=night_start_utc_ns,
+        bench_slug=bench.slug,
+        ordinal=ordinal,
+        target_slug=target.slug,
+        serial_slug=target.serial_slug,
+        attempt=attempt,
     )
     return {
         "format": FORMAT,
@@ -50,6 +56,8 @@ def make_head(
         "attempt": attempt,
         "seed": seed,
         "operator": operator,
+        "confirmed": confirmed,
+        "specimen_serial": target.target.specimen_serial,
         "target": _file(target.target.name, target),
         "bench": _file(bench.bench.name, bench) | {"path": place_of(bench.path)},
         "spectrum": None if spectrum is None else _spectrum(spectrum),

@@ -28,7 +28,7 @@ from pathlib import Path
 from types import TracebackType
 from typing import Any, NoReturn
 
-from daq.records import FORMAT, KINDS, Body, Kind, Record
+from daq.records import FORMAT, KINDS, Body, Kind, Record, other_format
 from drivers.errors import GratingdError
 
 _APPLICATION_ID = 0x47525444  # "GRTD" in the SQLite header: tells a journal from any other SQLite file
@@ -455,11 +455,8 @@ def _check_head(path: Path, database: sqlite3.Connection) -> None:
     if row is None or row[0] != "head":
         _raise_damaged(path, "record 1 is no head")
     found = decode(path, 1, *row).get("format")
-    if isinstance(found, int) and found > FORMAT:
-        raise JournalError(
-            f"{path}: written by a newer gratingd: format {found}, this one reads {FORMAT}; "
-            "use a newer gratingd"
-        )
+    if isinstance(found, int) and found != FORMAT and found > 0:
+        raise JournalError(f"{path}: {other_format(found)}")
     if found != FORMAT:
         _raise_damaged(path, f"the head's format is {found!r}, not {FORMAT}")
 

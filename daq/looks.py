@@ -11,15 +11,17 @@ import contextlib
 import json
 import os
 import sys
+from dataclasses import replace
 from typing import Any, Protocol
 
 import numpy as np
 
 from analysis.counting import Counts
 from analysis.question import Evidence, Look, Question, from_json, to_json
+from analysis.readings import Reduced, Sums, reduce, reference_level_per_s
 from analysis.verdict import look
 from daq.machine import StartLook
-from daq.plan import mount_of
+from daq.planned import detector_law, mount_of, reference_law
 from daq.records import Body
 from daq.tally import Snapshot
 from drivers.errors import GratingdError
@@ -38,29 +40,43 @@ class Looker(Protocol):
     async def close(self) -> None: ...
 
 
-def counts_of(snapshot: Snapshot, plan: Body, *, at: Snapshot | None = None) -> Counts:
+def counts_of(
+    snapshot: Snapshot, plan: Body, *, at: Snapshot | None = None, level_per_s: float | None = None
+) -> Counts:
     """The snapshot as the analysis wants it: positions in nm on the bench's scale, sorted, times in s.
 
-    With `at`, on that later snapshot's positions; one not visited yet has no gate time.
+    With `at`, on that later snapshot's positions; one not visited yet has no gate time. level_per_s : the
+    reference's rate that is an exposure of 1; None: its mean over the snapshot.
     """
-    places = np.array(snapshot.rows if at is None else at.rows, dtype=np.int64).reshape(-1, 4)
+    return _reduced(snapshot, plan, at, level_per_s).counts
+
+
+def _reduced(snapshot: Snapshot, plan: Body, at: Snapshot | None, level_per_s: float | None) -> Reduced:
+    return reduce(
+        _sums(snapshot, plan, at),
+        detector=detector_law(plan),
+        reference=reference_law(plan),
+        reference_level_per_s=level_per_s,
+    )
+
+
+def _sums(snapshot: Snapshot, plan: Body, at: Snapshot | None) -> Sums:
+    places = np.array(snapshot.rows if at is None else at.rows, dtype=np.int64).reshape(-1, 5)
     if at is None:
         sums = places[:, 2:]
     else:
         known = {row[:2]: row[2:] for row in snapshot.rows}
-        sums = np.array([known.get(row[:2], (0, 0)) for row in at.rows], dtype=np.int64).reshape(-1, 2)
+        sums = np.array([known.get(row[:2], (0, 0, 0)) for row in at.rows], dtype=np.int64).reshape(-1, 3)
     wavelength_nm = mount_of(plan).wavelength_nm(places[:, 0])
     order = np.argsort(wavelength_nm, kind="stable")
-    return Counts(
+    return Sums(
         wavelength_nm=wavelength_nm[order],
-        counts=sums[order, 0].astype(float),
-        gate_s=sums[order, 1] * 1e-9,
         group=places[order, 1],
-        sigma=None,
-        dark_counts=float(snapshot.dark_counts),
+        counts=sums[order, 0],
+        gate_s=sums[order, 1] * 1e-9,
+        dark_counts=snapshot.dark_counts,
         dark_gate_s=snapshot.dark_gate_ns * 1e-9,
-        dead_time_s=plan["dead_time_ns"] * 1e-9,
-        dead_time_u_s=plan["dead_time_uncertainty_ns"] * 1e-9,
+        reference_counts=None if plan["reference"] is None else sums[order, 2],
     )
 
 
@@ -68,17 +84,25 @@ def answer(head: Body, request: StartLook) -> dict[str, Any]:
     """One look, cold: a pure function of the head, the counts and the last look's record."""
     plan, now = head["plan"], request.now
 
-    def earlier(snapshot: Snapshot | None) -> Counts | None:
-        return None if snapshot is None else counts_of(snapshot, plan, at=now)
+    law = reference_law(plan)
+    level_per_s = None if law is None else reference_level_per_s(_sums(now, plan, None), law)
 
+    def earlier(snapshot: Snapshot | None) -> Counts | None:
+        if snapshot is None:
+            return None
+        return counts_of(snapshot, plan, at=now, level_per_s=level_per_s)
+
+    reduced = _reduced(now, plan, None, level_per_s)
     evidence = Evidence(
-        now=counts_of(now, plan),
+        now=reduced.counts,
         swept=earlier(request.swept),
         previous=earlier(request.previous),
         first=earlier(request.first),
     )
     previous = None if request.previous_look is None else from_json(Look, request.previous_look)
-    result: dict[str, Any] = to_json(look(evidence, from_json(Question, head["question"]), previous))
+    made = look(evidence, from_json(Question, head["question"]), previous)
+    flags = (*made.flags, *(flag for flag in reduced.flags if flag not in made.flags))
+    result: dict[str, Any] = to_json(replace(made, flags=flags))
     return result
 
 

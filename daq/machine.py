@@ -18,7 +18,8 @@ Invariants (tests/test_machine.py holds them over random sequences):
 - after a stop no point starts; a safe stop always precedes the conclusion when devices are open;
 - a paused bench is at rest: shutter closed, nothing moving, whatever ended the dwell;
 - the run ends exactly once, with a reason from StopReason, and nothing is accepted afterwards;
-- points are never lost or counted twice: the tally is the sum of the good points so far;
+- points are never lost or counted twice: the tally is the sum of the good points so far (of the darks before
+  the first sweep of a session those since the dark has settled);
 - decisions depend on the order of records only, never on when a look's answer arrived.
 """
 
@@ -29,9 +30,10 @@ from dataclasses import dataclass
 from enum import StrEnum
 from typing import Any
 
-from analysis.allocate import SHORTEST_DWELL_NS, Visit, Window, next_sweep
+from analysis.allocate import SHORTEST_DWELL_NS, Visit, Window, next_sweep, settling_dark
+from daq.planned import tally_of
 from daq.records import Body, Kind, StopReason
-from daq.tally import Snapshot, Tally
+from daq.tally import SETTLING, Snapshot, Tally
 
 LOOK_LAG_VISITS = 6
 """A look's answer applies this many visits after its horizon: time for a worker to think while the bench
@@ -39,6 +41,12 @@ measures on, and the same in every replay however fast the computer is."""
 
 LOOK_RATIO = 1.2
 """Looks are geometric in the collected light."""
+
+NARROW = "narrower-than-expected"
+"""The flag of a line that is sharper than the stated slits and the diffraction let it be."""
+
+NARROW_IN_A_ROW = 3
+"""Looks that must find the line narrower than slits and diffraction can make it before the run is stopped."""
 
 FAULTS_IN_A_ROW = 3
 """A repeatable fault is repaired by preparing anew, this many times without a good point between."""
@@ -134,19 +142,25 @@ class _Pending:
 
 
 class Machine:
-    """One run. `plan` is the head's plan: window, dwells and limits as plain numbers."""
+    """One run. `plan` is the head's plan: window, dwells and limits as plain numbers.
+
+    darks : (counts, gate ns, middle of the dwell in bench time ns) of the sweeps' good dark dwells.
+    """
 
     def __init__(self, plan: Body) -> None:
         self.window = Window.from_json(plan["window"])
         self.time_limit_ns: int = plan["time_limit_ns"]
         self.light_limit_ns: int | None = plan["light_limit_ns"]
+        self.deadline_utc_ns: int | None = plan.get("deadline_utc_ns")
+        self._dark_settling_ns: int = plan.get("dark_settling_ns", 0)
         self.action = Action.NOTHING
         self.paused = False
         self.stop: StopReason | None = None
         self.ended = False
-        self.tally = Tally()
+        self.tally = tally_of(plan)
         self._swept = Tally()
         self._sweep: Tally | None = Tally()
+        self.darks: list[tuple[int, int, int]] = []
         self.points = 0
         self.light_ns = 0
         self.sweeps_done = 0
@@ -156,6 +170,9 @@ class Machine:
         self.cause: str | None = None
         self.bench_ns = 0
         self._session_base_ns = 0
+        self._settle_until_ns = 0
+        self._settling_dwells = 0
+        self._narrow_in_a_row = 0
         self._devices = False
         self._prepared = False
         self._resting = False
@@ -193,6 +210,9 @@ class Machine:
     def _begin_session(self, body: Body) -> None:
         """A process takes the run up (again): whatever was outstanding died with the last one."""
         self._session_base_ns = self.bench_ns
+        self._settle_until_ns = self.bench_ns + self._dark_settling_ns
+        self._settling_dwells = 0
+        self.tally.begin_session()
         self._devices = body["devices"]
         self._prepared = self._resting = self._made_safe = False
         self._dwell_ending = False
@@ -215,25 +235,22 @@ class Machine:
         self.points += 1
         if body["light"]:
             self.light_ns += body["gate_ns"]
+        if not body["flags"]:
+            self._faults_in_a_row = 0
+            self.tally.add_point(body)
+            if not body["light"] and body["sweep"] != SETTLING:
+                middle_ns = self._session_base_ns + (body["at_ns"] + body["end_ns"]) // 2
+                self.darks.append((body["counts"], body["gate_ns"], middle_ns))
+        if body["sweep"] == SETTLING:
+            self._settling_dwells += 1
+            return
         if body["flags"]:
             self._sweep = None  # a sweep with a gap in it says nothing about the comb as a whole
-        else:
-            self._faults_in_a_row = 0
-            self._count(body)
+        elif self._sweep is not None:
+            self._sweep.add_point(body)
         self._counted_ns += body["gate_ns"]
         if self._counted_ns > self._visits[self._cursor].dwell_ns - SHORTEST_DWELL_NS:
             self._next_visit()
-
-    def _count(self, body: Body) -> None:
-        for tally in (self.tally, self._sweep):
-            if tally is not None:
-                tally.add(
-                    steps=body["steps"],
-                    group=body["group"],
-                    light=body["light"],
-                    counts=body["counts"],
-                    gate_ns=body["gate_ns"],
-                )
 
     def _halted_record(self, body: Body) -> None:
         self.action = Action.NOTHING
@@ -251,7 +268,7 @@ class Machine:
                 raise MachineError(f"unknown wish '{other}'")
 
     def _deadline_record(self, body: Body) -> None:
-        self._stop_for(StopReason.TIME_LIMIT)
+        self._stop_for(StopReason.DEADLINE if body["limit"] == "deadline" else StopReason.TIME_LIMIT)
 
     def _look_record(self, body: Body) -> None:
         pending = self._pending
@@ -337,7 +354,16 @@ class Machine:
             return self._begin(Action.SAFE, StartSafe())
         return self._begin(Action.CONCLUDE, self.look_request(final=True))
 
+    def _is_settling(self) -> bool:
+        """Whether the dark is still to be waited for: it decays for minutes after too much light."""
+        waits = self.window.dark_ns > 0 and self.bench_ns < self._settle_until_ns
+        return waits and not self.tally.dark_is_settled
+
     def _measure(self) -> Iterable[Effect]:
+        if self._is_settling():
+            dark = StartPoint(SETTLING, self._settling_dwells, settling_dark(self.window))
+            yield self._begin(Action.POINT, dark)
+            return
         if self._pending is None and self._sweep_is_over():
             self._plan_sweep()
         if self._pending is not None:
@@ -397,6 +423,14 @@ class Machine:
             self._stop_for(StopReason.GOAL_REACHED)
         elif "conflict" in pending.answer.get("flags", ()):
             self._stop_for(StopReason.CONFLICT)  # both claims stand for good: more light cannot part them
+        self._check_width(pending.answer)
+
+    def _check_width(self, look: Body) -> None:
+        """Slits that are not as the bench file says would spoil the rest of the night as well."""
+        narrow = NARROW in look.get("flags", ())
+        self._narrow_in_a_row = self._narrow_in_a_row + 1 if narrow else 0
+        if self._narrow_in_a_row >= NARROW_IN_A_ROW:
+            self._stop_for(StopReason.NOT_AS_STATED)
 
     def _light_left_ns(self) -> int | None:
         return None if self.light_limit_ns is None else self.light_limit_ns - self.light_ns

@@ -15,13 +15,14 @@ from daq.head import make_head
 from daq.journal import FolderLock, Journal, JournalError
 from daq.machine import Machine
 from daq.nightfile import LoadedNight
+from daq.plan import after_over_light
 from daq.records import StopReason, run_identity
 from daq.runner import RunFailed
 from daq.target import LoadedTarget
 from drivers.bench import LoadedBench
 from drivers.clock import Clock
 from drivers.errors import SettingsError
-from drivers.factory import load_factories, make
+from drivers.factory import PROTOCOLS, load_factories, make, protocol_of
 from drivers.protocols import DriverContext
 
 log = logging.getLogger(__name__)
@@ -32,7 +33,10 @@ ENDS_THE_NIGHT = frozenset({StopReason.STOPPED_BY_USER, StopReason.NIGHT_DEADLIN
 
 @dataclass(frozen=True, slots=True)
 class NightOrder:
-    """What is to be done: a bench, targets in order, where files go, the seed of simulated devices."""
+    """What is to be done: a bench, targets in order, where files go, the seed of simulated devices.
+
+    confirmed : what was set by hand, who said so and how (daq.confirm); goes into every head.
+    """
 
     bench: LoadedBench
     targets: Sequence[LoadedTarget]
@@ -40,6 +44,7 @@ class NightOrder:
     seed: int
     night: LoadedNight | None = None
     operator: str | None = None
+    confirmed: dict[str, Any] | None = None
 
     @property
     def time_limit_s(self) -> float | None:
@@ -50,30 +55,32 @@ async def open_devices(loaded: LoadedBench, clock: Clock, seed: int) -> Devices:
     """Everything the bench file names. Raises SettingsError, or DeviceError if one does not answer; what was
     opened before that is closed again."""
     bench, factories = loaded.bench, load_factories(loaded)
-    tables = {
-        "drive": bench.drive.options,
-        "detector": bench.detector.options,
-        "shutter": bench.shutter.options,
-    }
-    if bench.ambient is not None:
-        tables["ambient"] = bench.ambient.options
     world: Any = None
     opened: dict[str, Any] = {}
 
     def open_one(role: str, options: dict[str, Any]) -> Any:
         context = DriverContext(clock=clock, role=role, seed=seed, folder=str(loaded.folder), world=world)
-        return make(factories[role], options, context, str(loaded.path))
+        return make(factories[role], options, context, str(loaded.path), protocol_of(role, bench))
 
     try:
         if bench.world is not None:
             world = open_one("world", bench.world.options)
-        for role, options in tables.items():
-            opened[role] = open_one(role, options)
+        for role in PROTOCOLS:
+            table = getattr(bench, role)
+            if table is not None:
+                opened[role] = open_one(role, table.options)
     except BaseException:
         for problem in await close_devices(opened):
             log.warning("closing %s", problem)
         raise
-    return Devices(opened["drive"], opened["detector"], opened["shutter"], opened.get("ambient"))
+    return Devices(**opened)
+
+
+def rehearse(order: NightOrder) -> None:
+    """All that can be wrong with a night before a device is opened. Raises SettingsError or DataError."""
+    for ordinal, target in enumerate(order.targets, start=1):
+        _head(order, 0, ordinal, target)
+    load_factories(order.bench)
 
 
 async def run_night(
@@ -103,6 +110,8 @@ async def run_night(
         try:
             for head in heads:
                 outcome.not_started.pop(0)
+                if outcome.runs and outcome.runs[-1]["stop_reason"] == StopReason.OVER_LIGHT:
+                    head["plan"] = after_over_light(head["plan"])
                 try:
                     summary = await _one_run(order, head, devices, clock, observe, on_run, stopper)
                 except (RunFailed, JournalError) as error:
@@ -157,7 +166,7 @@ def _make_folder(out: Path) -> None:
 
 def _head(order: NightOrder, start_utc_ns: int, ordinal: int, target: LoadedTarget) -> dict[str, Any]:
     attempt = 1
-    while journal_or_file_exists(order.out, start_utc_ns, ordinal, target.slug, attempt):
+    while _is_taken(order, start_utc_ns, ordinal, target, attempt):
         attempt += 1
     return make_head(
         order.bench,
@@ -169,9 +178,17 @@ def _head(order: NightOrder, start_utc_ns: int, ordinal: int, target: LoadedTarg
         attempt=attempt,
         seed=order.seed,
         operator=order.operator,
+        confirmed=order.confirmed,
     )
 
 
-def journal_or_file_exists(out: Path, start_utc_ns: int, ordinal: int, slug: str, attempt: int) -> bool:
-    run_id = run_identity(night_start_utc_ns=start_utc_ns, ordinal=ordinal, target_slug=slug, attempt=attempt)
-    return journal_path_of(out, run_id).exists() or (out / f"{run_id}.h5").exists()
+def _is_taken(order: NightOrder, start_utc_ns: int, ordinal: int, target: LoadedTarget, attempt: int) -> bool:
+    run_id = run_identity(
+        night_start_utc_ns=start_utc_ns,
+        bench_slug=order.bench.slug,
+        ordinal=ordinal,
+        target_slug=target.slug,
+        serial_slug=target.serial_slug,
+        attempt=attempt,
+    )
+    return journal_path_of(order.out, run_id).exists() or (order.out / f"{run_id}.h5").exists()

@@ -6,247 +6,192 @@ settings file edited meanwhile changes nothing.
 
 from __future__ import annotations
 
-import json
 import math
 from dataclasses import asdict
-from functools import lru_cache
 from typing import Any
 
-from analysis.air import LABORATORY_AIR, STANDARD_AIR, air_from_vacuum_nm, vacuum_from_air_nm
 from analysis.allocate import Window
-from analysis.optics import Mount, PlaneMount, TableMount, expected_fwhm_nm
+from analysis.dark import HORIZON_S
+from analysis.drives import PeriodicError
+from analysis.mounts import mount_to_json
+from analysis.profile import FWHM_PER_SIGMA
 from analysis.question import Feature, Question, to_json
+from daq.check import problems_of
 from daq.hands import Grip
-from daq.records import Body
+from daq.instrument import (
+    Stretch,
+    View,
+    filter_in_beam,
+    in_medium,
+    lamp_lit,
+    mount_of_bench,
+    periodic_errors,
+    slits_um,
+    stretches_of,
+    view_of,
+)
+from daq.records import Body, utc_ns_of
 from daq.spectrum import Spectrum
-from daq.target import LoadedTarget
-from drivers.bench import LoadedBench, PlaneOptics
+from daq.target import LoadedTarget, Target
+from drivers.bench import Bench, GratingOptics, LoadedBench
+from drivers.bench_devices import Detector, Reference
 from drivers.errors import SettingsError
 
-DITHER_GROUPS = 4
-"""Sweeps start at this many different fractions of a step, where a step holds as many."""
+DARK_SETTLING_S = 300.0
+"""The dark is given this long to settle before the first sweep, and at most a quarter of the run's time."""
+
+AFTER_OVER_LIGHT_S = 1800.0
+"""How long the dark may settle in the run after one that too much light ended: at most half of its time."""
 
 DARK_DWELLS = 4
 """One dark point a sweep, this many dwells long: about 6 % of the time of a sweep over +-4 FWHM."""
+
+SIGMA_OF_BOX = 12.0**-0.5
+"""Standard deviation of a box of full width 1: so the blur of a concave mount, small beside the slits or
+refused, enters the width of the line."""
 
 
 def draw_up(
     loaded: LoadedBench, target: LoadedTarget, spectrum: Spectrum | None
 ) -> tuple[dict[str, Any], dict[str, Any]]:
     """`(plan, question)` as JSON types. Raises SettingsError if the bench cannot do what is asked."""
-    bench = loaded.bench
-    mount = _mount(loaded, spectrum)
-    where = target_wavelength_nm(target, mount.medium)
-    key = f"wavelength_{target.target.medium}_nm = {target.target.wavelength_nm:g}"
-
-    def refuse(problem: str) -> SettingsError:
-        return SettingsError(str(target.path), [problem])
-
-    try:
-        centre_steps = mount.steps(where)
-        boxes_nm = mount.bandpass_nm(where)
-        diffraction_nm = mount.diffraction_fwhm_nm(where)
-        nm_per_step = abs(mount.dispersion_nm_per_step(centre_steps))
-    except ValueError as error:
-        raise refuse(f"{key}: the bench '{bench.name}' cannot reach it: {error}") from error
-
-    model = target.target.model
-    line_nm = math.hypot(1e-3 * model.line_fwhm_pm, diffraction_nm)
-    fwhm_nm = expected_fwhm_nm(box_widths_nm=boxes_nm, gaussian_fwhm_nm=line_nm)
-    window = _window(loaded, target, mount, where, fwhm_nm, nm_per_step, refuse)
-    decide = target.target.goal.decision
-    _check_goal(target, loaded, fwhm_nm, refuse)
-    goal_pm = target.target.goal.separation_uncertainty_pm
+    problems = problems_of(loaded, target, spectrum)
+    if problems:
+        raise SettingsError(str(target.path), [str(problem) for problem in problems])
+    bench, asked = loaded.bench, target.target
+    mount = mount_of_bench(bench, asked.setup, spectrum)
+    view = view_of(mount, asked)
+    stretches = sorted(stretches_of(view, asked), key=lambda stretch: stretch.lowest_steps)
+    decide, goal, limits = asked.goal.decision, asked.goal, asked.limits
+    smallest_pm, goal_pm = decide.smallest_separation_pm, goal.separation_uncertainty_pm
     question = Question(
-        feature=Feature(
-            wavelength_nm=where,
-            fwhm_nm=fwhm_nm,
-            box_widths_nm=boxes_nm,
-            line_fwhm_nm=line_nm,
-            shape=model.shape,
-            widths=model.widths,
-            background=model.background,
-            known_lines_nm=tuple(
-                in_medium(w, target.target.medium, mount.medium) for w in target.target.known_lines_nm
-            ),
-            shape_allowance=bench.shape.allowance,
-        ),
+        feature=feature_of(bench, asked, view, stretches),
         false_alarm=decide.false_alarm,
-        smallest_separation_nm=(
-            fwhm_nm if decide.smallest_separation_pm is None else 1e-3 * decide.smallest_separation_pm
-        ),
+        smallest_separation_nm=view.fwhm_nm if smallest_pm is None else 1e-3 * smallest_pm,
         smallest_ratio=decide.smallest_ratio,
         miss_probability=decide.miss_probability,
         separation_uncertainty_nm=None if goal_pm is None else 1e-3 * goal_pm,
         scale_relative_uncertainty=bench.scale.relative_uncertainty,
+        ratio_uncertainty=goal.ratio_uncertainty,
+        resolving_power_at_least=goal.resolving_power_at_least,
     )
-    limits = target.target.limits
-    detector = bench.detector
+    dwell_ns, time_limit_ns = round(asked.sweep.dwell_s * 1e9), round(limits.time_s * 1e9)
+    window = Window(
+        stretches=tuple((stretch.lowest_steps, stretch.highest_steps) for stretch in stretches),
+        step_steps=view.step_steps,
+        groups=view.groups,
+        dwell_ns=dwell_ns,
+        dark_ns=DARK_DWELLS * dwell_ns,
+    )
     plan = {
-        "mount": _mount_json(mount),
+        "mount": mount_to_json(mount),
         "medium": mount.medium,
         "window": window.to_json(),
-        "time_limit_ns": round(limits.time_s * 1e9),
+        "dark_settling_ns": min(round(DARK_SETTLING_S * 1e9), time_limit_ns // 4),
+        "dark_horizon_s": 0.0,
+        "time_limit_ns": time_limit_ns,
         "light_limit_ns": None if limits.light_s is None else round(limits.light_s * 1e9),
-        "dead_time_ns": detector.dead_time_ns,
-        "dead_time_uncertainty_ns": detector.dead_time_uncertainty_ns,
-        "grip": asdict(
-            Grip(
-                settle_ns=round(bench.drive.settle_s * 1e9),
-                backlash_steps=bench.drive.backlash_steps,
-                lowest_steps=bench.drive.lowest_steps,
-                longest_gate_ns=round(detector.longest_gate_s * 1e9),
-                highest_rate_per_s=detector.highest_rate_per_s,
-                dead_time_ns=detector.dead_time_ns,
-                move_timeout_s=bench.drive.move_timeout_s,
-            )
-        ),
+        "deadline_utc_ns": None if limits.deadline_utc is None else utc_ns_of(limits.deadline_utc),
+        "detector": _detector(bench.detector),
+        "reference": _reference(bench.reference),
+        "setup": _setup(bench, asked),
+        "grip": asdict(_grip(bench, asked)),
     }
     return plan, to_json(question)
 
 
-def in_medium(wavelength_nm: float, given: str, wanted: str, *, at_bench: bool = True) -> float:
-    """A catalogue wavelength (in standard air, or vacuum) on another scale.
-
-    "air" is the bench's own, taken as 20 C, 101 325 Pa, 50 %, or standard air if not `at_bench`. A real
-    laboratory differs by some 1e-6 of the wavelength, which moves where a feature is looked for, not how far
-    apart its lines are.
-    """
-    if given == wanted and not (wanted == "air" and at_bench):
-        return wavelength_nm
-    vacuum_nm = wavelength_nm if given == "vacuum" else vacuum_from_air_nm(wavelength_air_nm=wavelength_nm)
-    if wanted == "vacuum":
-        return vacuum_nm
-    air = LABORATORY_AIR if at_bench else STANDARD_AIR
-    return air_from_vacuum_nm(wavelength_vacuum_nm=vacuum_nm, air=air)
+def after_over_light(plan: Body) -> dict[str, Any]:
+    """The plan of the run after one that too much light ended: the dark stays raised for minutes to hours
+    (common practice), so it has longer to settle and must be seen to hold."""
+    settling_ns = min(round(AFTER_OVER_LIGHT_S * 1e9), plan["time_limit_ns"] // 2)
+    return {**plan, "dark_settling_ns": settling_ns, "dark_horizon_s": HORIZON_S}
 
 
-def target_wavelength_nm(target: LoadedTarget, medium: str) -> float:
-    """Where the target's main line is expected, nm, in `medium` at the bench."""
-    return in_medium(target.target.wavelength_nm, target.target.medium, medium)
+def feature_of(bench: Bench, target: Target, view: View, stretches: list[Stretch]) -> Feature:
+    """What the analysis is told of the line and the instrument."""
+    model, medium = target.model, view.mount.medium
+
+    def broadened_nm(own_pm: float) -> float:
+        """A source line with what diffraction and blur add to it."""
+        blur_nm = SIGMA_OF_BOX * FWHM_PER_SIGMA * view.blur_nm
+        return math.hypot(1e-3 * own_pm, view.diffraction_nm, blur_nm)
+
+    limit_pm = model.line_fwhm_at_most_pm
+    windows_nm = sorted((stretch.lowest_nm, stretch.highest_nm) for stretch in stretches)
+    return Feature(
+        wavelength_nm=view.wavelength_nm,
+        fwhm_nm=view.fwhm_nm,
+        box_widths_nm=view.boxes_nm,
+        line_fwhm_nm=broadened_nm(model.line_fwhm_pm),
+        shape=model.shape,
+        widths=model.widths,
+        background=model.background,
+        known_lines_nm=tuple(in_medium(nm, target.medium, medium) for nm in target.known_lines_nm),
+        shape_allowance=bench.shape.allowance,
+        kind=model.kind,
+        width_ratio=1.0 if model.width_ratio is None else model.width_ratio,
+        line_fwhm_limit_nm=None if limit_pm is None else broadened_nm(limit_pm),
+        pattern=tuple((1e-3 * part.offset_pm, part.strength) for part in model.pattern),
+        windows_nm=tuple(windows_nm) if len(windows_nm) > 1 else (),
+        self_reversal=model.self_reversal,
+        periodic_errors_nm=tuple(
+            (error.amplitude_nm(view.nm_per_step) * _left(error, view), error.period_nm(view.nm_per_step))
+            for error in periodic_errors(bench)
+        ),
+    )
 
 
-def mount_of(plan: Body) -> Mount:
-    """The mount a plan was drawn up for."""
-    return _mount_from(json.dumps(plan["mount"], sort_keys=True))
+def _left(error: PeriodicError, view: View) -> float:
+    """What the dithered points over a line leave of a periodic error: nothing of one much finer than it."""
+    return error.share_left(
+        fwhm_steps=view.fwhm_nm / view.nm_per_step, spacing_steps=view.step_steps / view.groups
+    )
 
 
-@lru_cache(maxsize=32)
-def _mount_from(text: str) -> Mount:
-    fields = json.loads(text)
-    kind = fields.pop("kind")
-    if kind == "table":
-        return TableMount(tuple(fields["wavelengths"]), fields["medium"])
-    return PlaneMount(**fields)
+def _detector(table: Detector) -> dict[str, Any]:
+    keys = {
+        "counter": ("dead_time_ns", "dead_time_uncertainty_ns"),
+        "analogue": ("charge_unit_c", "read_noise_a", "shot_noise_c"),
+    }[table.kind]
+    return {"kind": table.kind} | {key: getattr(table, key) for key in keys}
 
 
-def _mount_json(mount: PlaneMount | TableMount) -> dict[str, Any]:
-    if isinstance(mount, TableMount):
-        return {"kind": "table", "wavelengths": list(mount.wavelengths), "medium": mount.medium}
-    return {"kind": "plane"} | asdict(mount)
+def _reference(table: Reference | None) -> dict[str, Any] | None:
+    if table is None:
+        return None
+    return {"dead_time_ns": table.dead_time_ns, "dark_rate_per_s": table.dark_rate_per_s}
 
 
-def _mount(loaded: LoadedBench, spectrum: Spectrum | None) -> PlaneMount | TableMount:
-    bench = loaded.bench
+def _setup(bench: Bench, target: Target) -> dict[str, Any]:
+    """How the optics stand for this run, by device or by hand; null where nobody says."""
     optics = bench.optics
-    if isinstance(optics, PlaneOptics):
-        assert bench.drive.steps_per_radian is not None, "checked when the bench was read"
-        return PlaneMount(
-            groove_density_per_mm=optics.groove_density_per_mm,
-            ruled_width_mm=optics.ruled_width_mm,
-            focal_length_mm=optics.focal_length_mm,
-            included_angle_deg=optics.included_angle_deg,
-            order=optics.order,
-            entrance_slit_um=optics.entrance_slit_um,
-            exit_slit_um=optics.exit_slit_um,
-            steps_per_radian=bench.drive.steps_per_radian,
-            zero_order_steps=bench.zero_order_steps,
-        )
-    assert spectrum is not None, "a table mount is read with its spectrum"
-    return TableMount(tuple(float(w) for w in spectrum.wavelength_nm), spectrum.medium)
+    if not isinstance(optics, GratingOptics):
+        return {}
+    entrance_um, exit_um = slits_um(optics, target.setup)
+    return {
+        "order": target.setup.order or optics.order,
+        "entrance_slit_um": entrance_um,
+        "exit_slit_um": exit_um,
+        "filter": filter_in_beam(bench, target.setup),
+        "lamp": lamp_lit(bench, target.setup),
+    }
 
 
-def _window(
-    loaded: LoadedBench,
-    target: LoadedTarget,
-    mount: PlaneMount | TableMount,
-    where_nm: float,
-    fwhm_nm: float,
-    nm_per_step: float,
-    refuse: Any,
-) -> Window:
-    asked, sweep = target.target.window, target.target.sweep
-    outright = asked.outright_pm
-    below_nm, above_nm = (
-        (asked.half_width * fwhm_nm,) * 2 if outright is None else (1e-3 * outright[0], 1e-3 * outright[1])
+def _grip(bench: Bench, target: Target) -> Grip:
+    detector, setup = bench.detector, _setup(bench, target)
+    return Grip(
+        settle_ns=round(bench.drive.settle_s * 1e9),
+        backlash_steps=bench.drive.backlash_steps,
+        lowest_steps=bench.drive.lowest_steps,
+        longest_gate_ns=round(detector.longest_gate_s * 1e9),
+        highest_rate_per_s=detector.most_counts_per_s,
+        dead_time_ns=detector.dead_time_ns or 0.0,
+        move_timeout_s=bench.drive.move_timeout_s,
+        charge_unit_c=detector.charge_unit_c,
+        highest_current_a=detector.highest_current_a,
+        filter=None if bench.filter is None else setup["filter"],
+        lamp=None if bench.lamp is None else setup["lamp"],
+        entrance_slit_um=None if bench.slits is None else setup["entrance_slit_um"],
+        exit_slit_um=None if bench.slits is None else setup["exit_slit_um"],
+        reference_dark_per_s=0.0 if bench.reference is None else bench.reference.dark_rate_per_s,
     )
-    try:
-        ends = sorted((mount.steps(where_nm - below_nm), mount.steps(where_nm + above_nm)))
-    except ValueError as error:
-        raise refuse(f"window: {error}; make the window narrower") from error
-    lowest, highest = math.floor(ends[0]), math.ceil(ends[1])
-    drive = loaded.bench.drive
-    if lowest < drive.lowest_steps or highest > drive.highest_steps:
-        raise refuse(
-            f"window: around {where_nm:.6g} nm it needs the drive at {lowest} to {highest} steps, "
-            f"the bench allows "
-            f"{drive.lowest_steps} to {drive.highest_steps}"
-        )
-    if lowest - drive.backlash_steps < drive.lowest_steps:
-        raise refuse(
-            f"window: begins at {lowest} steps; to arrive from below the drive needs its backlash_steps = "
-            f"{drive.backlash_steps} of room above lowest_steps = {drive.lowest_steps}"
-        )
-    step_nm = fwhm_nm / 8 if sweep.step_pm is None else 1e-3 * sweep.step_pm
-    step_steps = 1 if isinstance(mount, TableMount) else max(1, round(step_nm / nm_per_step))
-    if sweep.step_pm is not None:
-        _check_step(sweep.step_pm, fwhm_nm, nm_per_step, isinstance(mount, TableMount), refuse)
-    groups = min(DITHER_GROUPS, step_steps)
-    period = drive.microstep_period_steps
-    if period is not None and (step_steps // groups) % period == 0:
-        raise refuse(
-            f"sweep.step_pm: {step_steps} steps meet the drive's periodic error (microstep_period_steps = "
-            f"{period}) at the same phase everywhere; choose another"
-        )
-    if (highest - lowest) // step_steps < 12:
-        raise refuse(
-            f"window: holds only {(highest - lowest) // step_steps + 1} positions of "
-            f"{1e3 * nm_per_step * step_steps:.3g} pm; widen the window or shorten sweep.step_pm"
-        )
-    dwell_ns = round(sweep.dwell_s * 1e9)
-    return Window(
-        lowest_steps=lowest,
-        highest_steps=highest,
-        step_steps=step_steps,
-        groups=groups,
-        dwell_ns=dwell_ns,
-        dark_ns=DARK_DWELLS * dwell_ns,
-    )
-
-
-def _check_step(step_pm: float, fwhm_nm: float, nm_per_step: float, is_table: bool, refuse: Any) -> None:
-    given = f"sweep.step_pm = {step_pm:g}"
-    if is_table:
-        raise refuse(f"{given}: a recorded spectrum has its own rows; leave step_pm out")
-    if step_pm < 0.5e3 * nm_per_step:
-        raise refuse(
-            f"{given}: one step of the drive is {1e3 * nm_per_step:.3g} pm; nothing finer is possible"
-        )
-    if step_pm > 0.25e3 * fwhm_nm:
-        raise refuse(
-            f"{given}: must be at most a quarter of a single line's width of {1e3 * fwhm_nm:.3g} pm on this "
-            "bench, or the line is stepped over; an eighth is usual"
-        )
-
-
-def _check_goal(target: LoadedTarget, loaded: LoadedBench, fwhm_nm: float, refuse: Any) -> None:
-    """A goal below what the scale alone leaves is refused before light is spent."""
-    goal_pm = target.target.goal.separation_uncertainty_pm
-    smallest_pm = target.target.goal.decision.smallest_separation_pm or 1e3 * fwhm_nm
-    floor_pm = loaded.bench.scale.relative_uncertainty * smallest_pm
-    if goal_pm is not None and goal_pm <= floor_pm:
-        raise refuse(
-            f"goal.separation_uncertainty_pm = {goal_pm:g}: the scale of the bench (relative_uncertainty = "
-            f"{loaded.bench.scale.relative_uncertainty:g}) leaves {floor_pm:.2g} pm of {smallest_pm:.3g} pm; "
-            "no light can reach the goal"
-        )

@@ -141,7 +141,7 @@ class Live:
         return table
 
     def _rows(self, machine: Machine) -> list[tuple[str, str]]:
-        from daq.plan import mount_of
+        from daq.planned import mount_of
 
         rows = [("doing", doing(machine))]
         point = self._last_point

@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from daq.export_columns import AMBIENT, COLUMNS, SWITCHES, bodies
-from daq.records import FORMAT, Kind, Record
+from daq.records import FORMAT, Kind, Record, other_format
 from drivers.errors import DataError
 
 _BLOCK = 4096
@@ -93,11 +93,8 @@ def open_run(path: Path) -> h5py.File:
         found = file["entry/config/format"][()]
         if not isinstance(found, np.integer) or found < 1:
             _raise_damaged(path, f"its format is {found!r}")
-        if found > FORMAT:
-            raise DataError(
-                f"{path}: written by a newer gratingd: format {int(found)}, this one reads {FORMAT}; "
-                "use a newer gratingd"
-            )
+        if found != FORMAT:
+            raise DataError(f"{path}: {other_format(int(found))}")
     except (OSError, RuntimeError) as error:
         file.close()
         _raise_damaged(path, error)

@@ -111,12 +111,12 @@ class Runner:
         try:
             async with asyncio.TaskGroup() as self._tasks:
                 publisher = self._tasks.create_task(self._publish())
-                left_ns = max(0, self._machine.time_limit_ns - self._machine.bench_ns)
-                limit = asyncio.get_running_loop().call_later(left_ns * 1e-9, self._time_is_up)
+                limits = self._set_limits()
                 try:
                     await self._consume()
                 finally:
-                    limit.cancel()
+                    for limit in limits:
+                        limit.cancel()
                 self._outbox.put_nowait(None)
                 await publisher
         except BaseExceptionGroup as failures:
@@ -161,8 +161,16 @@ class Runner:
             if not self._machine.ended:
                 self.post(Kind.FAULT, self._fault("display", error))
 
-    def _time_is_up(self) -> None:
-        self.post(Kind.DEADLINE, {"at_ns": self.at_ns(), "limit": "time"})
+    def _set_limits(self) -> list[asyncio.TimerHandle]:
+        """The run's own time, and the moment by which it must have ended if there is one."""
+        machine, loop = self._machine, asyncio.get_running_loop()
+        left_ns = {"time": machine.time_limit_ns - machine.bench_ns}
+        if machine.deadline_utc_ns is not None:
+            left_ns["deadline"] = machine.deadline_utc_ns - self._clock.utc_ns()
+        return [loop.call_later(max(0, ns) * 1e-9, self._time_is_up, limit) for limit, ns in left_ns.items()]
+
+    def _time_is_up(self, limit: str) -> None:
+        self.post(Kind.DEADLINE, {"at_ns": self.at_ns(), "limit": limit})
 
     # ---- effects ----------------------------------------------------------------------------------------
 

@@ -5,9 +5,20 @@ from __future__ import annotations
 from typing import Any
 
 from analysis.air import LABORATORY_AIR
+from analysis.dark import FEWEST_DWELLS, drift
+from analysis.digits import with_uncertainty
+from analysis.readings import AnalogueLaw
 from analysis.separation import separation_of
 from daq.machine import Machine
-from daq.records import Body
+from daq.planned import detector_law
+from daq.records import Body, StopReason
+from daq.tally import dark_events
+
+DARK_DRIFT = "dark-drift"
+"""The flag of a dark that was not the same throughout the run."""
+
+DRIFT_RISK = 1e-3
+"""How often a steady dark is told to drift, a run."""
 
 
 def conclusion(head: Body, machine: Machine, look: dict[str, Any] | None) -> dict[str, Any]:
@@ -24,8 +35,8 @@ def conclusion(head: Body, machine: Machine, look: dict[str, Any] | None) -> dic
         "sweeps": machine.sweeps_done,
         "summary": {
             "target": head["target"]["name"],
-            **verdict_fields(look),
-            **({} if look is not None else _no_look(machine)),
+            "specimen_serial": head["specimen_serial"],
+            **summary_of_look(head, machine, look),
             "cause": machine.cause,
             "stop_reason": machine.stop,
             "bench_time_s": machine.bench_ns / 1e9,
@@ -38,6 +49,38 @@ def conclusion(head: Body, machine: Machine, look: dict[str, Any] | None) -> dic
             "file": f"{head['run_id']}.h5",
         },
     }
+
+
+def summary_of_look(head: Body, machine: Machine, look: Body | None) -> dict[str, Any]:
+    """Verdict, numbers, flags and sentences of a run: those of its last look, and of its darks."""
+    fields = verdict_fields(look) | ({} if look is not None else _no_look(machine))
+    if machine.stop is StopReason.NOT_AS_STATED:
+        fields["evidence"] = [
+            *fields["evidence"],
+            "stopped: the lines are narrower than the stated slits and the diffraction let them be; "
+            "look at the slits, mend the bench file and measure again",
+        ]
+    moved = _dark_drift(head, machine)
+    if moved is not None:
+        fields["flags"] = [*fields["flags"], DARK_DRIFT]
+        fields["evidence"] = [*fields["evidence"], moved]
+    return fields
+
+
+def _dark_drift(head: Body, machine: Machine) -> str | None:
+    """What the darks of the sweeps say of their change over the run, if they say anything clear."""
+    if len(machine.darks) < FEWEST_DWELLS:
+        return None
+    law = detector_law(head["plan"])
+    events = dark_events([d[:2] for d in machine.darks], law if isinstance(law, AnalogueLaw) else None)
+    found = drift(events, at_s=[d[2] * 1e-9 for d in machine.darks], risk=DRIFT_RISK)
+    if not found.is_clear:
+        return None
+    return (
+        f"the dark was not the same throughout: about {found.rate_per_s:.3g} per s, "
+        f"changed by {with_uncertainty(found.change_per_s, found.change_u_per_s)} per s from the first sweep "
+        "to the last; the fit took it as one"
+    )
 
 
 def _no_look(machine: Machine) -> dict[str, Any]:

@@ -55,7 +55,7 @@ def light_to_goal(look: Mapping[str, Any], question: Mapping[str, Any], light_s:
     if look["verdict"] == "pair":
         if goal_nm is None or budget is None:
             return None
-        floor = math.hypot(budget["shape_nm"], budget["scale_nm"])
+        floor = math.hypot(budget["shape_nm"], budget["scale_nm"], budget["drive_nm"])
         if goal_nm <= floor:
             return None
         share: float = budget["statistics_nm"] ** 2 / (goal_nm**2 - floor**2)
@@ -64,3 +64,13 @@ def light_to_goal(look: Mapping[str, Any], question: Mapping[str, Any], light_s:
         look["log_e_pair"] / look["bound_pair"], look["log_e_single"] / look["bound_single"]
     )
     return light_s * (1.0 / progress - 1.0) if progress > 0.05 else None
+
+
+def length(nm: float) -> str:
+    """`18.6 pm`, `2.31 nm`."""
+    return f"{nm:.3g} nm" if abs(nm) >= 0.9995 else f"{1e3 * nm:.3g} pm"
+
+
+def whole(value: float) -> str:
+    """A large number to four digits: `13 980`."""
+    return f"{float(f'{value:.4g}'):,.0f}".replace(",", " ")

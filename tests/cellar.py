@@ -29,8 +29,8 @@ wavelength_air_nm = 313.155
 [window]
 half_width_fwhm = 2.5
 [sweep]
-dwell_s = 0.5
-step_pm = 4.5
+dwell_s = 0.25
+step_pm = 2.4
 [goal]
 separation_uncertainty_pm = 0.6
 [limits]

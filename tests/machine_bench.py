@@ -21,14 +21,14 @@ from daq.machine import (
     StartSafe,
 )
 from daq.records import Kind, StopReason
+from daq.tally import SETTLING
 
 GATE_NS = 1_000_000_000
 
 
 def plan(**changes: Any) -> dict[str, Any]:
     window = {
-        "lowest_steps": 0,
-        "highest_steps": 40,
+        "stretches": [[0, 40]],
         "step_steps": 3,
         "groups": 3,
         "dwell_ns": 2 * GATE_NS,
@@ -161,6 +161,8 @@ class Play:
                 gates_ns = GATE_NS
         flags = ["saturated"] if choice % 11 == 10 else []
         counts = counts_at(visit.steps, start.sweep)
+        if start.sweep == SETTLING:  # a dark that was raised and comes down
+            counts = 10 + (400 >> start.index)
         if visit.light and not flags:
             self.good_light[0] += counts
             self.good_light[1] += gates_ns
@@ -274,13 +276,14 @@ def state_of(machine: Machine) -> dict[str, Any]:
     """Everything a machine knows, comparable."""
     state = dict(vars(machine))
     for name in ("tally", "_swept", "_sweep"):
-        state[name] = None if state[name] is None else state[name].snapshot()
+        tally = state[name]
+        state[name] = None if tally is None else (tally.snapshot(), tally.dark_is_settled)
     return state
 
 
-def measuring(points: int = 3) -> Play:
+def measuring(points: int = 3, the_plan: dict[str, Any] | None = None) -> Play:
     """A run that is prepared and has made so many points; the next one is under way."""
-    play = Play()
+    play = Play(the_plan)
     for _ in range(points + 1):
         play.finish()
     assert isinstance(play.outstanding, StartPoint)

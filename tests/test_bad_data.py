@@ -174,7 +174,7 @@ def empty(file: Path) -> None:
 
 def newer(file: Path) -> None:
     with h5py.File(file, "r+") as run:
-        run["entry/config/format"][...] = 2
+        run["entry/config/format"][...] = 3
 
 
 def format_zero(file: Path) -> None:
@@ -240,7 +240,7 @@ def edit_head(file: Path, change: Callable[[dict[str, Any]], object]) -> None:
         (somebody_elses, ["is HDF5, but not a run file made by gratingd"]),
         (no_hdf5, ["is not an HDF5 file"]),
         (empty, ["is not an HDF5 file"]),
-        (newer, ["written by a newer gratingd: format 2, this one reads 1", "use a newer gratingd"]),
+        (newer, ["written by a newer gratingd: format 3, this one reads 2", "use a newer gratingd"]),
         (format_zero, ["damaged"]),
         (without_its_scan, ["damaged"]),
         (without_its_events, ["damaged"]),
@@ -302,7 +302,7 @@ def journal_of_a_newer_format(whole: Path, folder: Path) -> Path:
     shutil.copy(whole.with_suffix(".journal"), journal)
     with sqlite3.connect(journal) as database:
         (text,) = database.execute("SELECT body FROM rec WHERE seq = 1").fetchone()
-        newer = json.dumps(json.loads(text) | {"format": 2})
+        newer = json.dumps(json.loads(text) | {"format": 3})
         database.execute("UPDATE rec SET body = ? WHERE seq = 1", (newer,))
     database.close()
     return journal
@@ -314,7 +314,7 @@ def test_a_journal_of_a_newer_format(whole: Path, tmp_path: Path) -> None:
     for resume in ([], ["--resume"]):
         done = gratingd("recover", ".", "--json", *resume, cwd=tmp_path)
         assert done.returncode == Exit.BROKE_OFF
-        told = "run.journal: written by a newer gratingd: format 2, this one reads 1; use a newer gratingd"
+        told = "run.journal: written by a newer gratingd: format 3, this one reads 2; use a newer gratingd"
         assert json.loads(done.stdout) == {"runs": [], "not_started": [], "problems": [told]}
         assert done.stderr == f"gratingd: {told}\n"
     assert journal.read_bytes() == before

@@ -20,11 +20,17 @@ from daq.records import Kind
 SEED = 20310211
 
 
-def demo(folder: Path, *, seed: int, hashes: str) -> tuple[list[dict[str, Any]], dict[str, str]]:
-    """The demo in a child: its JSON without the folder, and the hash of every file it left."""
+DEMO = ("demo",)
+ACCEPTANCE = ("night", "emberlight-3", "acceptance")
+
+
+def night(
+    folder: Path, *, seed: int, hashes: str, command: tuple[str, ...] = ACCEPTANCE
+) -> tuple[list[dict[str, Any]], dict[str, str]]:
+    """A shipped night in a child: its JSON without the folder, and the hash of every file it left."""
     folder.mkdir()
     done = gratingd(
-        *("demo", "--json", "--out", "files", "--seed", str(seed)),
+        *(*command, "--json", "--out", "files", "--seed", str(seed)),
         cwd=folder,
         more={"PYTHONHASHSEED": hashes},
     )
@@ -37,18 +43,25 @@ def demo(folder: Path, *, seed: int, hashes: str) -> tuple[list[dict[str, Any]],
 
 
 @pytest.mark.slow
-def test_the_demo_is_the_same_bytes_for_a_seed(tmp_path: Path) -> None:
-    first = demo(tmp_path / "first", seed=SEED, hashes="0")
+def test_a_night_is_the_same_bytes_for_a_seed(tmp_path: Path) -> None:
+    first = night(tmp_path / "first", seed=SEED, hashes="0")
     assert sorted(Path(name).suffix for name in first[1]) == [".h5"] * 4 + [".journal"] * 4
-    assert demo(tmp_path / "again", seed=SEED, hashes="0") == first
-    assert demo(tmp_path / "one", seed=SEED, hashes="1") == first
-    assert demo(tmp_path / "random", seed=SEED, hashes="random") == first
+    assert night(tmp_path / "again", seed=SEED, hashes="0") == first
+    assert night(tmp_path / "one", seed=SEED, hashes="1") == first
+
+
+@pytest.mark.slow
+def test_the_demo_is_the_same_bytes_for_a_seed(tmp_path: Path) -> None:
+    """With all that the simple bench has not: lamps, filters, slits, orders, self-reversal."""
+    first = night(tmp_path / "first", seed=SEED, hashes="0", command=DEMO)
+    assert sorted(Path(name).suffix for name in first[1]) == [".h5"] * 9 + [".journal"] * 9
+    assert night(tmp_path / "random", seed=SEED, hashes="random", command=DEMO) == first
 
 
 @pytest.mark.slow
 def test_another_seed_is_another_night(tmp_path: Path) -> None:
-    runs, files = demo(tmp_path / "one", seed=SEED, hashes="0")
-    others, other_files = demo(tmp_path / "other", seed=SEED + 1, hashes="0")
+    runs, files = night(tmp_path / "one", seed=SEED, hashes="0")
+    others, other_files = night(tmp_path / "other", seed=SEED + 1, hashes="0")
     assert set(files) == set(other_files)
     assert not set(files.values()) & set(other_files.values())
     assert [one["verdict"] for one in others] == [one["verdict"] for one in runs]
@@ -106,8 +119,8 @@ def test_a_look_sees_a_single_count_more(tmp_path: Path) -> None:
     """The comparison above would mean nothing if looks could not tell."""
     head, asked = look_requests(tmp_path)
     request = asked[-1]
-    steps, group, counts, gate_ns = request.now.rows[7]
-    rows = (*request.now.rows[:7], (steps, group, counts + 1, gate_ns), *request.now.rows[8:])
+    steps, group, counts, gate_ns, reference = request.now.rows[7]
+    rows = (*request.now.rows[:7], (steps, group, counts + 1, gate_ns, reference), *request.now.rows[8:])
     more = dataclasses.replace(request, now=dataclasses.replace(request.now, rows=rows))
     looker = InlineLooker(head)
     assert asyncio.run(looker.look(more)) != asyncio.run(looker.look(request))

@@ -54,11 +54,15 @@ def named(name: str) -> dict[str, str]:
 def head(**other: Any) -> dict[str, Any]:
     mount = {"kind": "table", "wavelengths": [313.0 - 0.002 * k for k in range(50)][::-1], "medium": "air"}
     return {
-        "format": 1, "run_id": "20310211T180000Z-01-hg-1", "night": "N", "night_file": named("night"),
+        "format": 2, "run_id": "20310211T180000Z-01-hg-1", "night": "N", "night_file": named("night"),
         "ordinal": 1, "attempt": 1, "created_utc_ns": START_NS, "seed": 7, "operator": "day shift",
         "target": named("Hg 313 nm pair"), "bench": named("bench 3") | {"path": "bench.toml"},
         "spectrum": None, "software": {"gratingd": "0.1.0", "numpy": "2.0"},
-        "plan": {"mount": mount, "medium": "air", "dead_time_ns": 1000.0},
+        "confirmed": None, "specimen_serial": None,
+        "plan": {
+            "mount": mount, "medium": "air", "reference": None, "setup": {"order": 1},
+            "detector": {"kind": "counter", "dead_time_ns": 1000.0, "dead_time_uncertainty_ns": 10.0},
+        },
         "question": {"feature": {"wavelength_nm": 313.155}},
     } | other  # fmt: skip
 

@@ -147,7 +147,7 @@ def test_a_driver_that_fails_before_it_can_be_awaited_does_not_spoil_making_safe
     assert outcome.summary["safe"]["drive"] == "stopped"
 
 
-LONG_DWELLS = QUICK_TARGET.replace("dwell_s = 0.5", "dwell_s = 3.4").replace("400.0", "900.0")
+LONG_DWELLS = QUICK_TARGET.replace("dwell_s = 0.25", "dwell_s = 3.4").replace("400.0", "900.0")
 
 
 def test_gates_counted_before_a_fault_are_kept(tmp_path: Path) -> None:

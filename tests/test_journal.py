@@ -21,7 +21,7 @@ from daq.journal import FolderLock, Journal, JournalError, encode, newest_seq, r
 from daq.records import KINDS
 
 ROOT = Path(__file__).resolve().parent.parent
-HEAD = {"format": 1, "run_id": "20310211T180000Z-01-hg-313-1"}
+HEAD = {"format": 2, "run_id": "20310211T180000Z-01-hg-313-1"}
 
 
 def point(number: int) -> dict[str, Any]:
@@ -169,7 +169,7 @@ def damage(path: Path, statement: str) -> None:
         ("UPDATE rec SET body='{\"a\":' WHERE seq=9", r"record 9 \(point\) is not JSON"),
         ("UPDATE rec SET body='{\"a\":NaN}' WHERE seq=9", r"record 9 \(point\) is not JSON"),
         ("UPDATE rec SET body='[]' WHERE seq=9", r"record 9 \(point\) is not a JSON object"),
-        ("UPDATE rec SET body='{\"format\":2}' WHERE seq=1", "newer gratingd: format 2, this one reads 1"),
+        ("UPDATE rec SET body='{\"format\":3}' WHERE seq=1", "newer gratingd: format 3, this one reads 2"),
         ("UPDATE rec SET body='{}' WHERE seq=1", "format is None"),
         ("DROP TABLE rec", "holds no records"),
         ("PRAGMA application_id=7", "not a gratingd journal"),
@@ -271,7 +271,7 @@ class Dying(sqlite3.Connection):
         return super().execute(*given)
 plain = sqlite3.connect
 sqlite3.connect = lambda *given, **named: plain(*given, factory=Dying, **named)
-journal.Journal.create(sys.argv[1], {"format": 1}, threaded=True).close()
+journal.Journal.create(sys.argv[1], {"format": 2}, threaded=True).close()
 """
 
 
@@ -342,7 +342,7 @@ def test_kill_9_loses_nothing_that_was_acknowledged(tmp_path: Path) -> None:
 INLINE = """
 import os, signal, sys
 from daq.journal import Journal
-journal = Journal.create(sys.argv[1], {"format": 1}, threaded=False)
+journal = Journal.create(sys.argv[1], {"format": 2}, threaded=False)
 for number in range(int(sys.argv[2])):
     journal.append("point", {"number": number})
 os.kill(os.getpid(), signal.SIGKILL)
@@ -364,7 +364,7 @@ import asyncio, resource, sys
 from daq.journal import Journal, JournalError
 threaded = sys.argv[2] == "True"
 async def main():
-    journal = Journal.create(sys.argv[1], {"format": 1}, threaded=threaded)
+    journal = Journal.create(sys.argv[1], {"format": 2}, threaded=threaded)
     resource.setrlimit(resource.RLIMIT_FSIZE, (100_000, 100_000))
     acknowledged = 1
     for place in ("append", "durable"):

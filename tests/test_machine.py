@@ -18,6 +18,7 @@ PLANS = st.sampled_from(
         plan(light_limit_ns=37 * GATE_NS),
         plan(time_limit_ns=55 * GATE_NS),
         plan(time_limit_ns=55 * GATE_NS, light_limit_ns=9 * GATE_NS),
+        plan(dark_settling_ns=11 * GATE_NS),
     ]
 )
 

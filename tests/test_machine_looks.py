@@ -117,13 +117,13 @@ def test_the_answer_of_a_look_applies_six_visits_after_its_horizon(late: bool) -
 
 def test_a_sweep_shorter_than_the_lag_waits_at_its_last_visit() -> None:
     """The next look needs the answer of this one: it applies before the sweep is over."""
-    narrow = plan()["window"] | {"highest_steps": 6}  # two or three positions and a dark a sweep
+    narrow = plan()["window"] | {"stretches": [[0, 6]]}  # two or three positions and a dark a sweep
     play = Play(plan(window=narrow))
     horizon = 0
     while not play.machine.tally.can_be_weighed and play.machine.points < 200:
         play.finish()
     assert not play.looks_asked, "seven places in three groups are never enough to weigh"
-    narrow = plan()["window"] | {"highest_steps": 12}
+    narrow = plan()["window"] | {"stretches": [[0, 12]]}
     play = Play(plan(window=narrow))
     horizon = until_look(play).horizon
     while play.outstanding is not None:

@@ -37,7 +37,7 @@ def measuring(
     """A run in the making; killed if the test leaves before it has ended."""
     bench_file(folder, changes=FAST_BENCH)
     target_file(folder, text)
-    child = start("measure", "bench.toml", "target.toml", *options, cwd=folder, **more)
+    child = start("measure", "bench.toml", "target.toml", "--confirm", *options, cwd=folder, **more)
     try:
         yield child
     finally:
@@ -118,7 +118,7 @@ def test_signals_that_keep_coming_do_no_harm(tmp_path: Path) -> None:
 
 
 def test_the_first_moment_can_be_stopped_too(tmp_path: Path) -> None:
-    with measuring(tmp_path, text=TARGET.replace("dwell_s = 0.004", "dwell_s = 5.0")) as child:
+    with measuring(tmp_path, text=TARGET.replace("dwell_s = 0.004", "dwell_s = 1.0")) as child:
         wait_for_line(child, "ready")
         child.send_signal(signal.SIGINT)
         _, err = child.communicate(timeout=60)

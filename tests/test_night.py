@@ -9,7 +9,8 @@ import pytest
 from cellar import QUICK_TARGET, START_UTC_NS, bench_file, fault, target_file
 
 from daq.carry import Outcome, Stopper, left_unsafe
-from daq.cli import Exit, _exit_code
+from daq.cli import Exit
+from daq.cli_bench import _exit_code
 from daq.night import NightOrder, run_night
 from daq.records import Kind, StopReason
 from daq.runner import Notice
@@ -108,7 +109,7 @@ def test_devices_opened_before_one_that_cannot_be_are_closed_again(
     def refuse(options: Any, context: Any) -> Any:
         raise DeviceError(context.role, "nobody answers")
 
-    monkeypatch.setattr("simulators.memory._MemoryDevice.close", note)
+    monkeypatch.setattr("simulators.memory_device.MemoryDevice.close", note)
     monkeypatch.setattr("simulators.memory.shutter", refuse)
     with pytest.raises(DeviceError, match="nobody answers"):
         night(tmp_path, bench_file(tmp_path))

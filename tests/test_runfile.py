@@ -16,11 +16,13 @@ from drivers.errors import DataError
 
 TEXT = {"name": "x", "slug": "x", "text": "", "sha256": "0" * 64}
 HEAD: dict[str, Any] = {
-    "format": 1, "run_id": "r", "night": None, "night_file": None, "ordinal": 1, "attempt": 1, "seed": 1,
+    "format": 2, "run_id": "r", "night": None, "night_file": None, "ordinal": 1, "attempt": 1, "seed": 1,
     "created_utc_ns": 0, "operator": None, "target": TEXT, "bench": TEXT, "spectrum": None, "software": {},
     "question": {"feature": {"wavelength_nm": 500.0}},
     "plan": {
-        "mount": {"kind": "table", "wavelengths": [500.0, 501.0], "medium": "vacuum"}, "dead_time_ns": 0.0,
+        "mount": {"kind": "table", "wavelengths": [500.0, 501.0], "medium": "vacuum"},
+        "medium": "vacuum", "reference": None, "setup": {},
+        "detector": {"kind": "counter", "dead_time_ns": 0.0, "dead_time_uncertainty_ns": 0.0},
     },
 }  # fmt: skip
 POINT: dict[str, Any] = {
@@ -75,7 +77,8 @@ def change(path: Path, place: str, value: Any) -> None:
 @pytest.mark.parametrize(
     ("place", "value", "says"),
     [
-        ("entry/config/format", 2, "newer gratingd: format 2, this one reads 1"),
+        ("entry/config/format", 3, "newer gratingd: format 3, this one reads 2"),
+        ("entry/config/format", 1, "older gratingd: format 1, this one reads 2"),
         ("entry/config/format", 0, "damaged run file"),
         ("entry/config/format", None, "not a run file made by gratingd"),
         ("entry/scan/gates", None, "damaged run file"),
