@@ -11,6 +11,8 @@ from analysis.candidates import PAIR, REVERSED, SINGLE, Candidate, Candidates
 from analysis.claims import AMBIGUOUS
 from analysis.digits import with_uncertainty
 from analysis.doubts import (
+    NO_LINE,
+    NOT_REACHED,
     fits_poorly,
     further_line_nm,
     is_like_reversed,
@@ -57,7 +59,9 @@ def describe(
     width = observed_width(sigma_nm=sigma, gamma_nm=gamma, box_widths_nm=feature.box_widths_nm)
     fwhm, fwhm_u = width.fwhm_nm, _fwhm_u(where, chosen, width, spread)
     if not (PAIR in said or REVERSED in said or line_stands_out(model_1, single, spread)):
-        flags.append("no-line")
+        is_seen = model_1.x[0] < feature.wavelength_nm - feature.fwhm_nm
+        is_seen &= bool(model_1.x[-1] > feature.wavelength_nm + feature.fwhm_nm)
+        flags.append(NO_LINE if is_seen else NOT_REACHED)
     elif feature.reach_nm is None:  # else the width was read off the same data: nothing to compare
         if fwhm - 2.0 * fwhm_u > 1.15 * feature.fwhm_nm:
             flags.append("broader-than-expected")
@@ -75,11 +79,15 @@ def describe(
         reasons += (f"a further line at about {place} nm would explain the rest: give it as a known line",)
     verdict = _verdict(flags, said)
     rests_on = [claimed.best] if verdict != "undecided" else [single, pair]
-    if "no-line" not in flags and not all(made.converged for made in rests_on):
+    is_without_line = bool({NO_LINE, NOT_REACHED} & set(flags))
+    if not is_without_line and not all(made.converged for made in rests_on):
         flags.append("not-converged")
     numbers = _pair_numbers(model_2, pair, question, spread)
-    # without a line there is nothing that a second one could be a part of
-    excluded = () if "no-line" in flags else exclusion_curve(model_1, single, question, spread)
+    # without a line there is nothing that a second one could be a part of, and where one line does not hold
+    # nothing is excluded beside it
+    one_holds = pair.log_likelihood - single.log_likelihood < claims.bound_pair
+    has_curve = one_holds and not is_without_line and set(said) <= {SINGLE}
+    excluded = exclusion_curve(model_1, single, question, spread) if has_curve else ()
     centre, centre_u = numbers.centre_nm, numbers.centre_u_nm
     if verdict in (SINGLE, REVERSED):
         centre, centre_u = chosen.value("centre_nm"), spread * chosen.deviation("centre_nm")
@@ -157,7 +165,7 @@ def _verdict(flags: list[str], said: tuple[str, ...]) -> str:
     if {"conflict", "poor-fit", "dead-time-load"} & set(flags) or not said:
         return "undecided"
     # a broad line may be two lines closer than the question asks about
-    if said == (SINGLE,) and {"no-line", "broader-than-expected", AMBIGUOUS} & set(flags):
+    if said == (SINGLE,) and {NO_LINE, NOT_REACHED, "broader-than-expected", AMBIGUOUS} & set(flags):
         return "undecided"
     return said[0]
 

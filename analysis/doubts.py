@@ -38,6 +38,13 @@ REVERSED_LOSS = 3.0
 _TOLERANCE = 1e-3
 
 
+NO_LINE = "no-line"
+"""The flag of a window in which nothing stands above the background."""
+
+NOT_REACHED = "line-not-reached"
+"""The flag of a sweep that ended before it had passed the place where the line is expected."""
+
+
 def misfit_sigmas(model: FeatureModel, made: FitResult) -> float:
     """How far chi square lies above what noise and the shape allowance let expect, in normal sigmas.
 

@@ -34,6 +34,10 @@ from analysis.fit import inverse
 from analysis.readings import AnalogueLaw, CounterLaw
 
 FEWEST_POSITIONS = 12
+TOO_FAINT = (
+    "the two runs are too faint or too short to be laid over each other; measure a line as bright as the "
+    "bench allows, for longer"
+)
 AGREES_WITHIN = 2.0
 """Standard uncertainties of the difference within which stated and found dead time agree."""
 CLEAR_CUBE = 3.0
@@ -309,6 +313,8 @@ def _fit(
         jacobian[:, dark_k], jacobian[:, dark2_k] = t, -1.0
         weighted = jacobian / variance[:, None]
         information = weighted.T @ jacobian + np.diag(pull)
+        if int(used.sum()) < FEWEST_POSITIONS or not (np.diag(information) > 0.0).all():
+            raise ValueError(TOO_FAINT)
         covariance = inverse(information)
         step = covariance @ (-weighted.T @ missed - pull * (values - centre))
         values = values + step

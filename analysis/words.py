@@ -6,6 +6,7 @@ from dataclasses import replace
 
 from analysis.claims import AMBIGUOUS
 from analysis.digits import with_uncertainty
+from analysis.doubts import NO_LINE, NOT_REACHED
 from analysis.question import Look, Question
 
 PM = 1e3
@@ -13,7 +14,8 @@ PM = 1e3
 SENTENCES = {
     "conflict": "the evidence reached both bounds: line shape or light are not what they are taken for",
     "poor-fit": "neither one nor two lines describe the data",
-    "no-line": "no line stands above the background: lamp, shutter, filter, wavelength?",
+    NO_LINE: "no line stands above the background: lamp, shutter, filter, wavelength?",
+    NOT_REACHED: "the run ended before its first sweep had passed the line",
     "not-converged": "a fit did not settle; look at the spectrum",
     "overdispersed": "the scatter is over twice what is stated: line shape, neighbours or sigma are not "
     "what they are taken for, and the false-alarm level is nominal",
@@ -34,7 +36,7 @@ def explain(look: Look, question: Question, reasons: tuple[str, ...]) -> Look:
     """The same look with its evidence as sentences."""
     said = list(reasons) + _findings(look, question) + [_claims(look)]
     said += [SENTENCES[flag] for flag in look.flags if flag in SENTENCES]
-    budget = None if "no-line" in look.flags else look.budget
+    budget = None if {NO_LINE, NOT_REACHED} & set(look.flags) else look.budget
     if budget is not None and budget.shape_nm > budget.statistics_nm:
         said.append("the line shape, not the light, limits the separation: more light does not help")
     if budget is not None and budget.drive_nm > max(budget.statistics_nm, budget.shape_nm):

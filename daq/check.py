@@ -21,6 +21,8 @@ from daq.instrument import Stretch, View, mount_of_bench, stretches_of, view_of
 from daq.spectrum import Spectrum, read_spectrum
 from daq.target import LoadedTarget, Target
 from drivers.bench import Bench, LoadedBench
+from drivers.errors import SettingsError
+from drivers.factory import load_factories
 
 
 def problems_of(loaded: LoadedBench, target: LoadedTarget, spectrum: Spectrum | None) -> list[Finding]:
@@ -30,6 +32,16 @@ def problems_of(loaded: LoadedBench, target: LoadedTarget, spectrum: Spectrum | 
     """
     findings, _, _ = findings_of(loaded.bench, target.target, spectrum)
     return [finding for finding in findings if finding.severity == "problem"]
+
+
+def _driver_findings(loaded: LoadedBench) -> list[Finding]:
+    """Factories that cannot be loaded; nothing is called, so no device is opened. A caution only: the optics
+    can be checked before the drivers are written."""
+    try:
+        load_factories(loaded)
+    except SettingsError as error:
+        return [Finding("caution", "bench", *problem.split(": ", 1)) for problem in error.problems]
+    return []
 
 
 def findings_of(
@@ -72,7 +84,7 @@ def checked(loaded: LoadedBench, targets: Sequence[LoadedTarget]) -> dict[str, A
     """
     bench = loaded.bench
     spectrum = None if loaded.spectrum_path is None else read_spectrum(loaded.spectrum_path)
-    found = bench_findings(bench, spectrum)
+    found = worst_first([*_driver_findings(loaded), *bench_findings(bench, spectrum)])
     report: dict[str, Any] = {
         "bench": {
             "name": bench.name,

@@ -107,7 +107,7 @@ def _odd_units(bench: Bench, mount: TurnedGrating) -> Iterator[Finding]:
         yield _caution(
             key,
             f"the arms are only {fastest:.2g} times as long as the ruled width of {mount.ruled_width_mm:g}"
-            " mm; was the length given in cm?",
+            f" mm; was the length given in {'cm' if fastest > 0.1 else 'm'}?",
         )
     if bench.optics.mount != "table" and max(mount.entrance_slit_um, mount.exit_slit_um) < 1.0:
         yield _caution(

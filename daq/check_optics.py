@@ -252,6 +252,6 @@ def goal_below_floor(bench: Bench, view: View, target: Target) -> Iterator[Findi
         "goal.separation_uncertainty_pm",
         f"{goal_pm:g} pm is below what remains with any amount of light: the scale of the bench"
         f" (relative_uncertainty = {scale:g}) leaves {1e3 * scale * smallest_nm:.2g} pm of"
-        f" {1e3 * smallest_nm:.3g} pm{of_drive}; no light can reach the goal. Ask for more than"
+        f" {length(smallest_nm)}{of_drive}; no light can reach the goal. Ask for more than"
         f" {floor_pm:.2g} pm, or calibrate the bench better",
     )

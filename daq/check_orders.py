@@ -26,6 +26,8 @@ first, and as it was given none to the second."""
 GHOST_SHARE = 0.1
 """Of the smallest companion asked for: a ghost stronger than that could be taken for one."""
 
+FAINTEST_GHOST = 1e-9
+"""Of its parent: fainter ones are below a count in any run."""
 
 ENGLISH = {"Ar": "argon", "Cd": "cadmium", "Hg": "mercury", "Fe": "iron", "Ne": "neon", "Zn": "zinc"}
 
@@ -55,6 +57,8 @@ def filter_findings(
         return
     name = filter_in_beam(bench, target.setup)
     table = bench.band(name)
+    if table is None and name != NO_FILTER:
+        return  # told as a problem of [setup]
     key = "setup.filter" if bench.filter is not None else "by_hand.filter"
     file: Literal["bench", "target"] = "target" if bench.filter is not None else "bench"
     ends = [end for part in stretches for end in (part.lowest_nm, part.highest_nm)] or [view.wavelength_nm]
@@ -180,6 +184,8 @@ def ghost_findings(
             yield Finding("problem", "bench", "optics.ghosts", str(error))
             return
         for ghost in found:
+            if ghost.share < FAINTEST_GHOST:
+                continue
             could_mislead = ghost.share >= GHOST_SHARE * target.goal.decision.smallest_ratio
             yield Finding(
                 "caution" if could_mislead else "note",

@@ -56,26 +56,33 @@ def step_findings(bench: Bench, view: View, target: Target) -> Iterator[Finding]
             f"{step_pm:g}: must be at most an eighth of a single line's width of {line_pm:.3g} pm on this"
             f" bench, that is {_floored(line_pm / 8):g} pm, or the line is stepped over",
         )
-    yield from _periods(bench, view)
+    yield from _periods(bench, view, target)
 
 
-def _periods(bench: Bench, view: View) -> Iterator[Finding]:
-    spacing = view.step_steps // view.groups
-    period = bench.drive.microstep_period_steps
-    if period is not None and spacing % period == 0:
+def _periods(bench: Bench, view: View, target: Target) -> Iterator[Finding]:
+    periods = {
+        error.period_steps: f"error {error.name!r} (period_steps = {error.period_steps:g})"
+        for error in periodic_errors(bench)
+    }
+    microsteps = bench.drive.microstep_period_steps
+    if microsteps is not None:
+        periods.setdefault(microsteps, f"periodic error (microstep_period_steps = {microsteps})")
+    for period_steps, named in periods.items():
+        if not _in_phase(view.step_steps, view.groups, period_steps):
+            continue
+        finer_pm = 1e3 * (view.step_steps - 1) * view.nm_per_step
+        other = "choose another" if target.sweep.step_pm is not None else f"state one, such as {finer_pm:.4g}"
         yield _problem(
             "sweep.step_pm",
-            f"{view.step_steps} steps meet the drive's periodic error (microstep_period_steps = {period})"
-            " at the same phase everywhere; choose another",
+            f"{view.step_steps} steps meet the drive's {named} at the same phase everywhere; {other}",
         )
-    for error in periodic_errors(bench):
-        turns = spacing / error.period_steps
-        if turns >= 1.0 and abs(turns - round(turns)) < 1e-3:
-            yield _problem(
-                "sweep.step_pm",
-                f"{view.step_steps} steps meet the drive's error {error.name!r} (period_steps ="
-                f" {error.period_steps:g}) at the same phase everywhere; choose another",
-            )
+
+
+def _in_phase(step_steps: int, groups: int, period_steps: float) -> bool:
+    """Whether all the dithered sweeps meet a period at one phase, so that nothing of its error averages."""
+    apart = [step_steps, *(group * step_steps // groups for group in range(1, groups))]
+    turns = [steps / period_steps for steps in apart]
+    return all(turn >= 1.0 and abs(turn - round(turn)) < 1e-3 for turn in turns)
 
 
 def window_findings(
@@ -165,8 +172,8 @@ def _far_lines(view: View, target: Target, stretches: Sequence[Stretch]) -> Iter
         if beyond_nm > FAR_FWHM * view.fwhm_nm:
             yield _problem(
                 f"model.known_lines_{target.medium}_nm",
-                f"the line at {given_nm:.7g} nm stands {1e3 * beyond_nm:.3g} pm beyond the end of the"
-                " window, where its strength cannot be settled; leave it out, or widen the window",
+                f"the line at {given_nm:.7g} nm stands {length(beyond_nm)} beyond the end of the window,"
+                " where its strength cannot be settled; leave it out, or widen the window",
             )
 
 

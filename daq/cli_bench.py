@@ -19,6 +19,7 @@ from daq.cli_common import (
     die,
     json_option,
     mistakes,
+    operator_option,
     out_option,
     print_runs,
     seed_option,
@@ -60,7 +61,7 @@ def demo(out: Path | None, seed: int, as_json: bool) -> None:
 @click.argument("night", metavar="NIGHT")
 @out_option
 @seed_option
-@click.option("--operator", help="Who answers for the night; recorded.")
+@operator_option
 @confirm_option
 @click.option("--real-time", is_flag=True, help="Wait for every gate even where the bench says virtual time.")
 @json_option
@@ -82,7 +83,7 @@ def night(bench: str, night: str, real_time: bool, **started: Any) -> None:
 @click.argument("target")
 @out_option
 @seed_option
-@click.option("--operator", help="Who answers for the run; recorded.")
+@operator_option
 @confirm_option
 @json_option
 def measure(bench: str, target: str, **started: Any) -> None:

@@ -45,6 +45,17 @@ def out_option(command: Callable[..., Any]) -> Callable[..., Any]:
     return click.option("--out", type=click.Path(path_type=Path), default=Path("runs"), help=text)(command)
 
 
+def _named(context: click.Context, option: click.Parameter, value: str | None) -> str | None:
+    if value is not None and not value.strip():
+        raise click.BadParameter("is empty; give a name or leave the option out")
+    return value
+
+
+def operator_option(command: Callable[..., Any]) -> Callable[..., Any]:
+    text = "Who answers for what is measured; recorded."
+    return click.option("--operator", callback=_named, help=text)(command)
+
+
 def confirm_option(command: Callable[..., Any]) -> Callable[..., Any]:
     text = "Somebody has looked: slits, filter, lamp and all of [by_hand] are as the bench file says."
     return click.option("--confirm", "is_confirmed", is_flag=True, help=text)(command)

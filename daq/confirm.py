@@ -168,7 +168,11 @@ def ask_on_terminal(who: str | None) -> Ask | None:
         click.echo("Set by hand at this bench:", err=True)
         for item in items:
             click.echo(f"  - {item.words}", err=True)
-        answer = click.prompt("Look at each. Type yes if all of it is so", default="no", err=True)
+        try:
+            answer = click.prompt("Look at each. Type yes if all of it is so", default="no", err=True)
+        except click.Abort:  # the end of input (Ctrl-D)
+            click.echo(err=True)
+            return None
         return (who or "unnamed") if answer.strip().lower() == "yes" else None
 
     return ask

@@ -310,7 +310,7 @@ def _analysis(entry: h5py.Group, summary: Summary) -> None:
 
 def _exclusion(parent: h5py.Group, look: Mapping[str, Any]) -> None:
     """What a single line excludes: meaningless beside a pair, and a look without a line has none."""
-    if look["verdict"] == "pair" or not look["exclusion"]:
+    if not look["exclusion"]:
         return
     made = group(parent, "exclusion", "NXcollection")
     made.attrs["confidence"] = 0.95

@@ -8,6 +8,7 @@ from pathlib import Path
 from drivers.errors import SettingsError
 
 KINDS = ("benches", "targets", "nights")
+_NOUNS = {"benches": "a bench", "targets": "a target", "nights": "a night", "": "another file"}
 
 
 def shipped_folder() -> Path:
@@ -47,6 +48,12 @@ def resolve(given: str, kind: str | None = None) -> Path:
     if len(found) > 1:
         raise SettingsError(given, [f"no such file, and several shipped ones fit: {', '.join(found)}"])
     if not found:
+        others = [name for name in shipped_names() if name not in names and given in _spellings(name)]
+        if others:
+            problem = (
+                f"is {_NOUNS[others[0].partition('/')[0]]} ({others[0]}); {_NOUNS[kind or '']} is wanted here"
+            )
+            raise SettingsError(given, [problem])
         raise SettingsError(given, [f"no such file{_near(given, names)}"])
     return shipped_folder() / found[0]
 

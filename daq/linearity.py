@@ -111,6 +111,11 @@ def _periods_steps(run: RunData) -> tuple[float, ...]:
 
 
 def _check(one: RunData, two: RunData) -> None:
+    if one.points["seq"].shape == two.points["seq"].shape and one.head == two.head:
+        raise DataError(
+            f"{one.path} and {two.path}: are the same run; give one measured plainly and one through an "
+            "attenuator"
+        )
     for run in (one, two):
         if "detector" not in run.head["plan"]:
             raise DataError(f"{run.path}: written before detectors were recorded; measure anew")
@@ -121,6 +126,19 @@ def _check(one: RunData, two: RunData) -> None:
                 f"{one.path} and {two.path}: taken with different {what} in their bench files; only the "
                 "attenuator may differ"
             )
+
+    for key in ("high_voltage_v", "gain"):
+        if _confirmed(one, key) != _confirmed(two, key):
+            raise DataError(
+                f"{one.path} and {two.path}: taken with different {key} ({_confirmed(one, key)} and "
+                f"{_confirmed(two, key)}); a detector is another one at another voltage or gain"
+            )
+
+
+def _confirmed(run: RunData, key: str) -> object:
+    """What a person confirmed for the run; None where nothing was said."""
+    items = (run.head["confirmed"] or {}).get("items", ())
+    return next((item["value"] for item in items if item["key"] == key), None)
 
 
 def _good(run: RunData) -> np.ndarray[Any, np.dtype[np.bool_]]:

@@ -145,6 +145,7 @@ class Machine:
     """One run. `plan` is the head's plan: window, dwells and limits as plain numbers.
 
     darks : (counts, gate ns, middle of the dwell in bench time ns) of the sweeps' good dark dwells.
+    dark_is_unsettled : a sweep began before the dark had settled, its time for that being over.
     """
 
     def __init__(self, plan: Body) -> None:
@@ -168,6 +169,7 @@ class Machine:
         self.conclusion: dict[str, Any] | None = None
         self.last_safe: dict[str, Any] | None = None
         self.cause: str | None = None
+        self.dark_is_unsettled = False
         self.bench_ns = 0
         self._session_base_ns = 0
         self._settle_until_ns = 0
@@ -354,13 +356,14 @@ class Machine:
             return self._begin(Action.SAFE, StartSafe())
         return self._begin(Action.CONCLUDE, self.look_request(final=True))
 
-    def _is_settling(self) -> bool:
+    @property
+    def is_settling(self) -> bool:
         """Whether the dark is still to be waited for: it decays for minutes after too much light."""
         waits = self.window.dark_ns > 0 and self.bench_ns < self._settle_until_ns
         return waits and not self.tally.dark_is_settled
 
     def _measure(self) -> Iterable[Effect]:
-        if self._is_settling():
+        if self.is_settling:
             dark = StartPoint(SETTLING, self._settling_dwells, settling_dark(self.window))
             yield self._begin(Action.POINT, dark)
             return
@@ -373,6 +376,8 @@ class Machine:
             if self._pending.visits_left <= 0:
                 self.action = Action.LOOK  # the answer is late: wait, decisions do not depend on speed
                 return
+        if self.window.dark_ns > 0 and self._dark_settling_ns > 0 and not self.tally.dark_is_settled:
+            self.dark_is_unsettled = True  # it was given its time, and the light cannot wait for ever
         visit = self._visits[self._cursor].shortened(self._counted_ns, self._light_left_ns())
         yield self._begin(Action.POINT, StartPoint(self.sweeps_done, self._cursor, visit))
 

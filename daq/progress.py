@@ -174,6 +174,8 @@ def doing(machine: Machine) -> str:
     """What the machine waits for, in a few words."""
     if machine.ended:
         return f"done: {machine.stop}"
+    if machine.action == "point" and machine.is_settling:
+        return "repeating the dark until it has settled"
     words = {
         "nothing": "paused" if machine.paused else "about to start",
         "prepare": "identifying and homing",

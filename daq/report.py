@@ -42,6 +42,8 @@ def report(files: Sequence[Path], folder: Path, *, with_csv: bool) -> Reported:
         folder.mkdir(parents=True, exist_ok=True)
         for night in _nights(views):
             _write_night(night, folder, with_csv, done.written)
+    except FileExistsError as error:
+        raise DataError(f"{folder}: is a file; give the name of a folder") from error
     except OSError as error:
         raise DataError(
             f"{error.filename or folder}: cannot be written ({error.strerror or error}); make room or choose "

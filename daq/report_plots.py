@@ -19,6 +19,7 @@ from matplotlib.ticker import FuncFormatter, MaxNLocator
 
 from daq.report_data import FloatArray, Points, RunView, Series, Stretch
 from daq.report_tables import limit_at
+from daq.report_words import verdict_in_words
 
 INK, GREY, FAINT = "#1b2a33", "#6b7780", "#d5dadd"
 BLUE, VERMILION, GREEN, ORANGE, PURPLE, SKY = "#0072b2", "#d55e00", "#009e73", "#e69f00", "#cc79a7", "#56b4e9"
@@ -195,7 +196,7 @@ def _estimates(axes: Axes, view: RunView, at: FloatArray) -> None:
     open_marks = known & ~settled
     for mine, fill, label in (
         (settled, BLUE, "separation, decided: pair"),
-        (open_marks, "white", "undecided yet"),
+        (open_marks, "white", "best pair, not claimed"),
     ):
         if mine.any():
             axes.errorbar(
@@ -266,7 +267,7 @@ def _evidence(axes: Axes, view: RunView, at: FloatArray) -> None:
     axes.yaxis.set_minor_locator(mpl.ticker.NullLocator())
     axes.set_ylim(-0.08, max(1.6, 1.5 * highest))
     axes.set_ylabel("evidence / bound")
-    axes.legend(loc="best", ncols=2)
+    axes.legend(loc="best", ncols=2, frameon=True, edgecolor="none", facecolor="white")
 
 
 # ---- exclusion, light, drift ----------------------------------------------------------------------------
@@ -398,7 +399,7 @@ def night(views: Sequence[RunView]) -> Figure:
         length = (view.end_utc_ns - view.start_utc_ns) * 1e-9 / per_unit
         axes.barh(
             row, length, left=begin, height=0.62, color=colour, hatch=hatch, edgecolor="white",
-            label=None if verdict in named else verdict,
+            label=None if verdict in named else verdict_in_words(verdict),
         )  # fmt: skip
         named.add(verdict)
     axes.set_yticks(range(len(views)), [_short(view.summary["target"]) for view in views])

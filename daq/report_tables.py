@@ -20,6 +20,8 @@ MOST_ROWS = 200
 """Rows of a table that grows with the run; the file has them all."""
 
 
+NO_BREAK = "\N{NO-BREAK SPACE}"
+
 MULTIPLES = (1.0, 1.5, 2.0, 3.0, 4.0)
 """Of the separation asked for: where a table gives the exclusion curve."""
 
@@ -121,7 +123,7 @@ def seen(view: RunView) -> Table | None:
     if look is None:
         return None
     fit = look[FIT_OF.get(look["verdict"], "pair")]
-    unit = "events per s" if view.is_analogue else "counts per s"
+    unit = ("events per s" if view.is_analogue else "counts per s").replace(" ", NO_BREAK)
     chi2 = f"{fit['pearson_chi2'] / fit['dof']:.2f}" if fit["dof"] > 0 else NOTHING
     centre = with_uncertainty(look["centre_nm"], look["centre_u_nm"])
     width, usual = _pm(look["fwhm_nm"], look["fwhm_u_nm"]), _pm(feature["fwhm_nm"], None)
@@ -139,7 +141,8 @@ def seen(view: RunView) -> Table | None:
     dark = with_uncertainty(look["dark_per_s"], look["dark_u_per_s"])
     rows.append(("dark", dark if look["dark_per_s"] is None else f"{dark} {unit}", ""))
     rows.append(("χ² per degree of freedom", f"{chi2} ({fit['dof']})", "1"))
-    return Table("What the fit found", ("quantity", "found", "expected"), tuple(rows))
+    caption = "What the fit found; ± is counting alone, a place rests on the drive's zero as well"
+    return Table(caption, ("quantity", "found", "expected"), tuple(rows))
 
 
 def asked(view: RunView) -> Table:
@@ -208,8 +211,17 @@ def looks(view: RunView) -> Table | None:
 
 
 def excludes(look: Mapping[str, Any]) -> bool:
-    """Whether a look's exclusion curve says anything: it is meaningless beside a pair, and without a line."""
-    return look["verdict"] != "pair" and any(row["ratio_limit"] is not None for row in look["exclusion"])
+    """Whether a look's exclusion curve says anything.
+
+    It adds a faint second line to one line, and is meaningless without a line and where one line does not
+    describe the data: beside a pair or a self-reversed line, claimed or not yet.
+    """
+    if look["verdict"] in ("pair", "self-reversed"):
+        return False
+    rival, bound = look["log_numerator_pair"], look["bound_pair"]
+    if rival - look["log_numerator_single"] > bound:
+        return False
+    return any(row["ratio_limit"] is not None for row in look["exclusion"])
 
 
 def limits(view: RunView) -> Table | None:

@@ -17,6 +17,9 @@ from daq.tally import dark_events
 DARK_DRIFT = "dark-drift"
 """The flag of a dark that was not the same throughout the run."""
 
+DARK_UNSETTLED = "dark-unsettled"
+"""The flag of sweeps that began before the dark had settled."""
+
 DRIFT_RISK = 1e-3
 """How often a steady dark is told to drift, a run."""
 
@@ -59,6 +62,12 @@ def summary_of_look(head: Body, machine: Machine, look: Body | None) -> dict[str
             *fields["evidence"],
             "stopped: the lines are narrower than the stated slits and the diffraction let them be; "
             "look at the slits, mend the bench file and measure again",
+        ]
+    if machine.dark_is_unsettled:
+        fields["flags"] = [*fields["flags"], DARK_UNSETTLED]
+        fields["evidence"] = [
+            *fields["evidence"],
+            "the dark had not settled when the sweeps began; was there too much light before?",
         ]
     moved = _dark_drift(head, machine)
     if moved is not None:

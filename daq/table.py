@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import io
+import textwrap
 from collections.abc import Mapping, Sequence
 from typing import Any, Literal
 
@@ -38,7 +39,8 @@ def runs_table(runs: Sequence[Mapping[str, Any]]) -> str:
     for run in runs:
         cause = run.get("cause")
         for sentence in [*([f"stopped by a fault: {cause}"] if cause else []), *run["evidence"]]:
-            console.print(f"{run['target']}: {sentence}", soft_wrap=False)
+            told = textwrap.wrap(f"{run['target']}: {sentence}", WIDTH, subsequent_indent="  ")
+            console.print("\n".join(told))
     media = sorted({run["medium"] for run in runs})
     console.print(f"Separations in {' and '.join(media)}; ± is one standard uncertainty." if media else "")
     folders = sorted({run["file"].rpartition("/")[0] for run in runs if run["stop_reason"] and run["file"]})

@@ -28,10 +28,12 @@ def look_in_words(look: Mapping[str, Any]) -> str:
         f"evidence for two {_share(look['max_log_e_pair'], look['bound_pair'])}, "
         f"for one {_share(look['max_log_e_single'], look['bound_single'])}"
     )
+    if look.get("bound_reversed") is not None:
+        evidence += f", for a self-reversed one {_share(look['max_log_e_reversed'], look['bound_reversed'])}"
     if look["verdict"] == "pair":
         return f"pair, {separation} pm apart, ratio {with_uncertainty(look['ratio'], look['ratio_u'])}"
-    if look["verdict"] == "single":
-        return f"single ({evidence})"
+    if look["verdict"] in ("single", "self-reversed"):
+        return f"{look['verdict']} ({evidence})"
     return f"undecided: {evidence}"
 
 
@@ -60,9 +62,8 @@ def light_to_goal(look: Mapping[str, Any], question: Mapping[str, Any], light_s:
             return None
         share: float = budget["statistics_nm"] ** 2 / (goal_nm**2 - floor**2)
         return max(0.0, light_s * (share - 1.0))
-    progress: float = max(
-        look["log_e_pair"] / look["bound_pair"], look["log_e_single"] / look["bound_single"]
-    )
+    claims = [key for key in ("pair", "single", "reversed") if look.get(f"bound_{key}")]
+    progress: float = max(look[f"log_e_{key}"] / look[f"bound_{key}"] for key in claims)
     return light_s * (1.0 / progress - 1.0) if progress > 0.05 else None
 
 

@@ -15,6 +15,9 @@ from pydantic.fields import FieldInfo
 
 Models = list[type[BaseModel]]
 
+MARKS = {"bench": "optics", "target": "goal", "night": "runs"}
+"""A table by which each kind of settings file is known, whatever else is wrong with it."""
+
 UNITS = {
     "per_s": "1/s",
     "per_mm": "1/mm",
@@ -44,8 +47,12 @@ UNITS = {
 def complaints(model: type[BaseModel], data: Mapping[str, Any], error: ValidationError) -> list[str]:
     """One line per problem, in the order of the file's keys as the models list them.
 
-    A missing key whose misspelt form stands in the same table is not told twice.
+    A missing key whose misspelt form stands in the same table is not told twice. Of a file of another kind
+    only that is told.
     """
+    mixed_up = _mixed_up(model, data)
+    if mixed_up:
+        return [mixed_up]
     lines: list[str] = []
     explained: set[str] = set()
     missing: list[tuple[str, str]] = []
@@ -75,6 +82,15 @@ def complaints(model: type[BaseModel], data: Mapping[str, Any], error: Validatio
             lines.append(_join(place.path, value, f"must be {place.allowed()}{_hint(value, place)}"))
     lines += [line for path, line in missing if path not in explained]
     return list(dict.fromkeys(lines))  # each branch of a union tells its own
+
+
+def _mixed_up(model: type[BaseModel], data: Mapping[str, Any]) -> str:
+    """ "is a bench file; a target file is wanted here", or ""."""
+    wanted = [kind for kind, table in MARKS.items() if table in model.model_fields]
+    given = [kind for kind, table in MARKS.items() if table in data]
+    if len(wanted) != 1 or len(given) != 1 or wanted == given:
+        return ""
+    return f"is a {given[0]} file; a {wanted[0]} file is wanted here"
 
 
 class _Place:

@@ -148,6 +148,8 @@ def _syntax_problem(message: str, text: str) -> str:
         hint = f"; the key {line.split('=')[0].strip()!r} is given twice"
     elif said.startswith("Cannot declare"):
         hint = f"; the table {shown} is given twice"
+    elif said.startswith("Illegal character '\\n'"):
+        hint = "; a closing quote is missing"
     elif bare and said.startswith("Invalid value"):
         hint = f'; text stands in quotes: {bare.group(1)} = "{bare.group(2).strip()}"'
     return f"{place}: {said[:1].lower()}{said[1:]} in {shown!r}{hint}"

@@ -132,6 +132,7 @@ def run(
     seed: int = 1,
     wishes: Sequence[tuple[float, Callable[[Runner], None]]] = (),
     observe: Callable[[Notice], None] = lambda notice: None,
+    confirmed: dict[str, Any] | None = None,
 ) -> Outcome:
     """One run to its file."""
     folder.mkdir(parents=True, exist_ok=True)
@@ -147,6 +148,7 @@ def run(
         attempt=1,
         seed=seed,
         operator=None,
+        confirmed=confirmed,
     )
     machine = Machine(head["plan"])
     notices: list[Notice] = []

@@ -12,7 +12,8 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from analysis.allocate import Visit, Window, next_sweep
-from daq.tally import FEWEST_POSITIONS, Snapshot, Tally
+from analysis.readings import AnalogueLaw
+from daq.tally import FEWEST_POSITIONS, KEPT_UNSETTLED, SETTLING, Snapshot, Tally, dark_events
 
 WINDOW = Window(
     stretches=((100, 172),), step_steps=8, groups=4, dwell_ns=500, dark_ns=2000
@@ -255,3 +256,85 @@ def test_a_dozen_positions_with_light_can_be_weighed() -> None:
     tally.add(steps=11, group=0, light=True, counts=1, gate_ns=10)
     assert tally.can_be_weighed
     assert tally.snapshot().can_be_weighed
+
+
+# ---- the dark before the first sweep -----------------------------------------------------------------------
+
+LAW = AnalogueLaw(charge_unit_c=1e-15, read_noise_a=1e-13, shot_noise_c=2e-13)
+
+
+def darks(tally: Tally, *counts: int, gate_s: float = 2.0) -> None:
+    for number in counts:
+        tally.add_point({"sweep": SETTLING, "counts": number, "gate_ns": round(1e9 * gate_s)})
+
+
+def dark_of(tally: Tally) -> tuple[int, float]:
+    snapshot = tally.snapshot()
+    return snapshot.dark_counts, 1e-9 * snapshot.dark_gate_ns
+
+
+def test_dark_readings_are_events_in_seconds() -> None:
+    """Counts are events; 200 units of charge are one, read noise adds a quarter of an event per second, and
+    what an offset takes below zero is none."""
+    readings = [(400, 1_500_000_000), (-500, 1_000_000_000)]
+    assert dark_events(readings, None) == [(400.0, 1.5), (-500.0, 1.0)]
+    assert dark_events(readings, LAW) == [(pytest.approx(2.375), 1.5), (0.0, 1.0)]
+
+
+def test_each_session_adds_the_dark_that_has_settled_in_it() -> None:
+    """Raised dwells at the beginning of a session are not summed, and an earlier session's are kept."""
+    tally = Tally()
+    darks(tally, 5000, 100, 100, 100, 100)
+    assert tally.dark_is_settled
+    assert dark_of(tally) == (400, 8.0)
+    tally.begin_session()
+    assert not tally.dark_is_settled
+    assert dark_of(tally) == (400, 8.0)
+    darks(tally, 900)
+    assert not tally.dark_is_settled
+    assert dark_of(tally) == (1300, 10.0)
+    darks(tally, 120, 120, 120, 120)
+    assert tally.dark_is_settled
+    assert dark_of(tally) == (880, 16.0)
+
+
+def test_of_a_dark_that_has_not_settled_the_last_three_dwells_are_taken() -> None:
+    assert KEPT_UNSETTLED == 3
+    tally = Tally()
+    darks(tally, 5000, 2500, 1200, 600)
+    assert not tally.dark_is_settled
+    assert dark_of(tally) == (4300, 6.0)
+
+
+def test_a_dark_current_is_judged_by_its_events() -> None:
+    """A hundred events scatter by ten; as many units of charge as they are made of would not scatter so."""
+    currents, pulses = Tally(LAW), Tally()
+    for tally in (currents, pulses):
+        darks(tally, 20_000, 22_000, 19_000, 21_000)
+    assert currents.dark_is_settled
+    assert not pulses.dark_is_settled
+    assert dark_of(currents) == (82_000, 8.0), "what is summed are the integers that were recorded"
+
+
+def test_after_too_much_light_a_dark_must_be_seen_for_longer() -> None:
+    """Four dwells of 2 s are enough where every sweep takes a dark of its own, not for ten minutes ahead."""
+    usual, after_light = Tally(), Tally(dark_horizon_s=600.0)
+    for tally in (usual, after_light):
+        darks(tally, 16, 16, 16, 16)
+    assert usual.dark_is_settled
+    assert not after_light.dark_is_settled
+
+
+@pytest.mark.parametrize(
+    ("counts", "gate_s", "is_settled"),
+    [(4, 0.33, True), (4, 0.30, False), (10, 0.30, True), (9, 0.30, False)],
+)
+def test_a_fall_by_the_rate_itself_or_by_twenty_per_second_may_go_unseen(
+    counts: int, gate_s: float, is_settled: bool
+) -> None:
+    """Four dwells of n counts hide, at a risk of 0.01, a fall of 2.33 sqrt(4 n/(5/36)) over all four gates
+    (5/36: variance of four even places over their span). By hand for n = 4: 18.9 per s in gates of 0.33 s,
+    20.8 in 0.30 s; and it is 0.99 of the rate for n = 10, 1.04 of it for n = 9."""
+    tally = Tally()
+    darks(tally, *[counts] * 4, gate_s=gate_s)
+    assert tally.dark_is_settled is is_settled

@@ -20,6 +20,7 @@ from settings_samples import changed
 from daq.check import checked, findings_of
 from daq.check_bench import bench_findings, bench_numbers
 from daq.check_numbers import target_numbers
+from daq.check_optics import reach_nm
 from daq.check_orders import elements_named
 from daq.check_text import check_text
 from daq.cli import gratingd
@@ -73,6 +74,18 @@ def test_a_mistake_between_bench_and_target_is_told_with_its_numbers(name: str, 
     assert (row["severity"], row["says"]) in [(finding.severity, str(finding)) for finding in findings]
     if row["severity"] == "caution":
         assert not any(finding.severity == "problem" for finding in findings if finding.key in row["says"])
+
+
+def test_sweeps_that_drift_through_a_period_average_it_and_are_not_refused() -> None:
+    """65 steps, dithered by 16, 32 and 48: of 16 phases each point of a sweep meets the next one."""
+    told = check("emberlight-7", "hg-577-579")["targets"][0]["findings"]
+    assert told
+    assert not [row for row in told if "at the same phase" in row["text"]]
+
+
+def test_a_filter_that_is_not_there_is_told_once() -> None:
+    bench, target = pair("equipped", target=[('filter = "ultraviolet"', 'filter = "violet"')])
+    assert [finding.key for finding in found(bench, target)] == ["setup.filter"]
 
 
 def test_there_are_as_many_mistakes_as_a_lab_would_make() -> None:
@@ -266,6 +279,82 @@ def test_whatever_numbers_stand_in_the_files_there_is_a_report(seed: int) -> Non
     assert reported > 75
 
 
+def numbers_of(bench_edits: Any = (), target_edits: Any = ()) -> dict[str, Any]:
+    bench, target = pair("by_hand", bench_edits, target_edits)
+    _, view, stretches = findings_of(bench, target, None)
+    assert view is not None
+    return target_numbers(bench, view, target, stretches)
+
+
+@pytest.mark.parametrize("window", ["below_pm = 20.0\nabove_pm = 120.0", "below_pm = 120.0\nabove_pm = 20.0"])
+def test_the_companion_is_looked_for_where_the_window_has_room(window: str) -> None:
+    """On its longer side: the forecast is that of a window wide on both, but for the foot of one line."""
+    both = numbers_of((), [("half_width_fwhm = 5.0", "below_pm = 120.0\nabove_pm = 120.0")])
+    one = numbers_of((), [("half_width_fwhm = 5.0", window)])
+    wanted_pm = both["separation_u_one_sweep_pm"]
+    assert one["separation_u_one_sweep_pm"] == pytest.approx(wanted_pm, rel=0.01)
+
+
+def test_one_sweep_is_forecast_without_a_goal_and_with_one_that_no_light_reaches() -> None:
+    """What a sweep is worth is the light's affair; the time to a goal needs one that can be reached."""
+    plain = numbers_of()
+    assert plain["time_to_goal_s"] > 0.0
+    for edits in (
+        ((), [("separation_uncertainty_pm = 0.5\n", "")]),
+        ([("relative_uncertainty = 2e-5", "relative_uncertainty = 0.03")], ()),
+    ):
+        numbers = numbers_of(*edits)
+        assert numbers["separation_u_one_sweep_pm"] == plain["separation_u_one_sweep_pm"]
+        assert numbers["time_to_goal_s"] is None
+
+
+@pytest.mark.parametrize(("time_s", "is_told"), [(102.0, True), (112.0, False)])
+def test_three_sweeps_are_enough_to_see_drift(time_s: float, is_told: bool) -> None:
+    """A sweep takes 35.5 s: 139 points of 0.25 s, and 4 dwells of 0.2 s for the dark."""
+    limits = ("time_s = 1800.0\nlight_s = 1500.0", f"time_s = {time_s}")
+    findings = found(*pair("by_hand", target=[limits]))
+    assert ("limits.time_s" in [finding.key for finding in findings]) is is_told
+
+
+def test_a_drive_that_turns_further_than_light_can_follow_reaches_what_the_grating_does() -> None:
+    """The included angle of 22 degrees leaves 79 of rotation, 2 d cos^2 11 degrees (grating equation)."""
+    bench, target = pair("by_hand", [("highest_steps = 900000", "highest_steps = 1700000")])
+    _, view, _ = findings_of(bench, target, None)
+    assert view is not None
+    longest_nm = 2e6 / 1200.0 * math.cos(math.radians(11.0)) ** 2
+    assert reach_nm(bench, view.mount) == (0.0, pytest.approx(longest_nm, rel=1e-6))
+
+
+@pytest.mark.parametrize(
+    ("new", "said"),
+    [
+        (
+            "line_fwhm_pm = 1.5\nline_fwhm_at_most_pm = 25.0",
+            "model.line_fwhm_at_most_pm: 25 pm is wider than a line as recorded (20 pm) and tells nothing",
+        ),
+        ("line_fwhm_pm = 1.5\nline_fwhm_at_most_pm = 15.0", None),
+        (
+            "line_fwhm_pm = 25.0",
+            "model.line_fwhm_pm: the source line (25 pm) is wider than the slits' bandpass (19.2 pm): wider"
+            " slits would cost little and give more light",
+        ),
+    ],
+)
+def test_what_is_no_mistake_but_worth_knowing_is_a_note(new: str, said: str | None) -> None:
+    findings, _, _ = findings_of(*pair("by_hand", target=[("line_fwhm_pm = 1.5", new)]), None)
+    assert [str(finding) for finding in findings if finding.severity == "note"] == ([said] if said else [])
+
+
+@pytest.mark.parametrize(("grooves_per_period", "told"), [(4000.0, ["-1", "+1"]), (1500.0, [])])
+def test_a_ghost_is_told_once_and_only_inside_the_window(grooves_per_period: float, told: list[str]) -> None:
+    """lambda/p from the line (Rowland 1893): 78 pm at 4000 grooves a period, 209 pm at 1500; the window ends
+    100 pm from it. The lamp's own entry of the line is no second parent."""
+    ghosts = f"[optics.ghosts]\ngrooves_per_period = {grooves_per_period}\nfirst_order_fraction = 0.02\n"
+    findings, _, _ = findings_of(*pair("by_hand", [("[scale]", ghosts + "[scale]")]), None)
+    texts = [finding.text for finding in findings if "ghost number" in finding.text]
+    assert [text.split("ghost number ")[1][:2] for text in texts] == told
+
+
 def test_elements_are_known_by_symbol_and_by_name() -> None:
     assert elements_named("Hg 313 nm pair") == ("Hg",)
     assert elements_named("mercury and Cadmium") == ("Cd", "Hg")
@@ -308,6 +397,7 @@ def test_the_command_ends_with_2_when_a_run_would_be_refused_and_opens_no_device
     good = commandline.gratingd("check", "lab-skeleton", "ar-696-single", cwd=tmp_path)
     assert (good.returncode, good.stderr) == (0, "")
     assert good.stdout.rstrip().endswith("No problem found.")
+    assert "there is no module 'lab_drive'" in " ".join(good.stdout.split())
     bad = commandline.gratingd("check", "lab-skeleton", "hg-313-pair", cwd=tmp_path)
     assert bad.returncode == 2
     assert "blocks the target (313.0" in " ".join(bad.stdout.split())

@@ -324,7 +324,7 @@ def test_a_journal_that_is_none_costs_recover_only_itself(tmp_path: Path) -> Non
         (["measure", "emberlight-33", "hg-313-pair"], "benches/emberlight-3.toml"),
         (["analyse", "x.csv", "--target", "hg-31"], "targets/hg-313-pair.toml"),
         (["measure", "recorded-ar-750", "hg-313-pair"], "cannot reach it"),
-        (["measure", "acceptance", "hg-313-pair"], "no such file"),
+        (["measure", "acceptance", "hg-313-pair"], "is a night (nights/acceptance.toml); a bench is wanted"),
         (["night", "emberlight-3", "/"], "/"),
         (["analyse", "x.csv", "--known-line", "361.5"], "--known-line needs --line"),
         (["analyse", "x.csv", "--line", "361", "--target", "cd-361-pair"], "not both"),

@@ -2,13 +2,16 @@
 
 from __future__ import annotations
 
+import contextlib
+import os
+import pty
 from collections.abc import Sequence
 from pathlib import Path
 
 import pytest
 from settings_samples import BY_HAND, EQUIPPED, TABLE, TARGET, changed
 
-from daq.confirm import ByHandItem, ask_on_terminal, confirm, required
+from daq.confirm import ByHandItem, ask_on_terminal, confirm, login_name, required
 from daq.nightfile import LoadedNight, load_night
 from drivers.bench import LoadedBench, load_bench, read_bench
 from drivers.errors import SettingsError
@@ -172,8 +175,9 @@ def test_who_is_asked_sees_the_list_and_may_say_no(tmp_path: Path) -> None:
 
     record = confirm(bench(tmp_path), None, by=None, ask=yes)
     assert (record["how"], record["who"], shown) == ("asked", "W. Ashdown", EVERYTHING)
-    with pytest.raises(SettingsError, match="not confirmed; set the bench, or mend its file"):
+    with pytest.raises(SettingsError, match="not confirmed; set the bench, or mend its file") as caught:
         confirm(bench(tmp_path), None, by=None, ask=lambda items: None)
+    assert caught.value.file == str(tmp_path / "b.toml")
 
 
 def test_unattended_and_unconfirmed_nothing_begins(tmp_path: Path) -> None:
@@ -186,6 +190,51 @@ def test_unattended_and_unconfirmed_nothing_begins(tmp_path: Path) -> None:
         )
         assert "give --confirm" in problem
         assert "[confirmed]" in problem
+
+
+@pytest.mark.parametrize(
+    ("who", "typed", "confirmed_by"),
+    [
+        ("W. Ashdown", "yes", "W. Ashdown"),
+        ("W. Ashdown", " YES ", "W. Ashdown"),
+        (None, "yes", "unnamed"),
+        ("W. Ashdown", "no", None),
+        ("W. Ashdown", "", None),
+        ("W. Ashdown", "y", None),
+        ("W. Ashdown", "\x04", None),  # Ctrl-D
+    ],
+)
+def test_on_a_terminal_only_a_yes_confirms(
+    who: str | None,
+    typed: str,
+    confirmed_by: str | None,
+    monkeypatch: pytest.MonkeyPatch,
+    capsys: pytest.CaptureFixture[str],
+) -> None:
+    """The list and the question go to standard error, so that what is printed can be piped on."""
+    items = required(read_bench(BY_HAND, "b"))
+    ours, theirs = pty.openpty()
+    with open(ours, "r+b", buffering=0) as user:
+        with open(theirs) as stdin, open(os.dup(theirs), "w") as stderr:
+            monkeypatch.setattr("sys.stdin", stdin)
+            monkeypatch.setattr("sys.stderr", stderr)
+            user.write(f"{typed}\n".encode())
+            ask = ask_on_terminal(who)
+            assert ask is not None
+            assert ask(items) == confirmed_by
+        shown = ""
+        with contextlib.suppress(OSError):  # Linux: the other side is closed, and all of it is read
+            while True:
+                shown += user.read(4096).decode()
+    assert "Set by hand at this bench:" in shown
+    assert "all of it is so" in shown
+    assert all(f"- {item.words}" in shown for item in items)
+    assert capsys.readouterr().out == ""
+
+
+def test_who_has_logged_in_is_who_confirms_unless_told_otherwise(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setenv("LOGNAME", "w.ashdown")
+    assert login_name() == "w.ashdown"
 
 
 def test_without_a_terminal_nobody_is_asked() -> None:

@@ -7,7 +7,7 @@ import math
 
 import numpy as np
 import pytest
-from scipy.stats import binom, multinomial
+from scipy.stats import binom, chi2, multinomial
 
 from analysis.counting import FloatArray
 from analysis.dark import (
@@ -31,15 +31,15 @@ def middles(share: FloatArray) -> FloatArray:
     return made - float(share @ made)
 
 
-@pytest.mark.parametrize(("first", "total"), [(0, 3), (2, 3), (9, 30), (15, 30), (700, 1300)])
+@pytest.mark.parametrize(("first", "total"), [(0, 3), (3, 3), (2, 3), (9, 30), (15, 30), (700, 1300)])
 def test_two_dwells_are_a_binomial_test(first: int, total: int) -> None:
     """Two equal dwells: the tail of the trend is the binomial one, half of what was seen counted in."""
     share = np.array([0.5, 0.5])
     fall, rise = trend_tails(np.array([first, total - first], dtype=float), share, middles(share))
     seen = binom.pmf(first, total, 0.5)
     above = binom.sf(first, total, 0.5)  # a fall is many counts in the first dwell
-    if first in (0, total):
-        assert rise == pytest.approx(seen, rel=1e-9)
+    if first in (0, total):  # all at one end: an exact chance, not halved
+        assert (rise, fall) == pytest.approx((seen, 1.0) if first == 0 else (1.0, seen), rel=1e-9)
     else:
         # relative error of the formula: a fraction of one over the counts, and it grows far out
         assert fall == pytest.approx(above + 0.5 * seen, rel=0.01 if total > 10 else 0.06)
@@ -67,6 +67,32 @@ def test_a_trend_of_nothing_in_skewed_counts() -> None:
     exact = binom.sf(2, 10, 0.2) + 0.5 * binom.pmf(2, 10, 0.2)
     assert exact < 0.48
     assert fall == pytest.approx(exact, rel=0.015)
+
+
+def test_no_count_and_a_single_one_prove_nothing() -> None:
+    """Where nothing was counted every outcome is certain, and one count has nothing to scatter against."""
+    share = np.full(4, 0.25)
+    assert trend_tails(np.zeros(4), share, middles(share)) == (1.0, 1.0)
+    assert scatter_tail(np.zeros(4), share) == 1.0
+    assert scatter_tail(np.array([0.0, 1.0, 0.0, 0.0]), share) == 1.0
+
+
+def test_what_skewness_leaves_of_one_half() -> None:
+    """A thousand counts exactly as expected: what the binomial tail lacks of one half, to a few per cent."""
+    share = np.array([0.2, 0.8])
+    fall, _ = trend_tails(np.array([200.0, 800.0]), share, middles(share))
+    exact = binom.sf(200, 1000, 0.2) + 0.5 * binom.pmf(200, 1000, 0.2)
+    assert 0.5 - fall == pytest.approx(0.5 - exact, rel=0.03)
+
+
+@pytest.mark.parametrize("per_dwell", [0.5, 0.9, 1.3, 1.6])
+def test_scatter_of_many_counts_is_that_of_chi_square(per_dwell: float) -> None:
+    """Ten dwells of a million counts, up and down by as many standard deviations: the tail of chi square on
+    nine degrees of freedom, which its cube root meets to some per cent (Wilson and Hilferty 1931)."""
+    mean = 1e6
+    counts = mean + per_dwell * math.sqrt(mean) * np.array([1.0, -1.0] * 5)
+    tail = scatter_tail(counts, np.full(10, 0.1))
+    assert tail == pytest.approx(chi2.sf(10.0 * per_dwell**2, 9), rel=0.05)
 
 
 def test_moments_of_chi_square_over_all_outcomes() -> None:
@@ -118,6 +144,30 @@ def test_too_little_dark_proves_nothing() -> None:
     assert is_stable([(16.0, 2.0)] * 60, horizon_s=0.0) == 60
     assert is_stable([(160.0, 2.0)] * 3, horizon_s=0.0) is None
     assert is_stable([(1e5, 2.0)] * FEWEST_DWELLS, horizon_s=0.0) == FEWEST_DWELLS
+
+
+@pytest.mark.parametrize(
+    ("counts", "gate_s", "horizon_s", "kept"),
+    [
+        (39.0, 2.0, 0.0, 4),
+        (38.0, 2.0, 0.0, None),
+        (39.0, 2.0, 8.0, 4),
+        (156.0, 2.0, 16.0, 4),
+        (155.0, 2.0, 16.0, None),
+        (4.0, 6.25, 0.0, 4),
+        (4.0, 6.2, 0.0, None),
+    ],
+)
+def test_how_much_dark_proves_how_much(
+    counts: float, gate_s: float, horizon_s: float, kept: int | None
+) -> None:
+    """Four equal dwells of n counts in t s know the change to sqrt(4 n/(5/36))/(4 t) per s, 5/36 being the
+    variance of four even places over their span, and may hide 2.326 of that (normal deviate of 0.01).
+
+    By hand: half the rate from n = 38.97 on, four times as many for twice as far ahead; and 1 per s, which
+    is harmless at any rate, for n = 4 from 6.242 s on.
+    """
+    assert is_stable([(counts, gate_s)] * 4, horizon_s=horizon_s) == kept
 
 
 def test_hardly_any_dark_is_soon_good_enough() -> None:
@@ -193,6 +243,13 @@ def test_the_change_is_that_of_a_straight_line() -> None:
     found = drift([(10.0, 1.0), (20.0, 1.0), (30.0, 1.0), (40.0, 1.0)])
     assert found.change_per_s == pytest.approx(30.0)
     assert found.rate_per_s == pytest.approx(25.0)
+
+
+def test_dwells_of_unequal_length_stand_at_their_middles() -> None:
+    """A rate of 10 + 3 t over dwells of 1, 4, 2 and 3 s: the mean of each is the rate at its middle, and from
+    the first middle to the last, 8 s, the change is 24."""
+    found = drift([(11.5, 1.0), (76.0, 4.0), (56.0, 2.0), (106.5, 3.0)])
+    assert found.change_per_s == pytest.approx(24.0)
 
 
 def test_nonsense_is_refused() -> None:

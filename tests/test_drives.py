@@ -52,6 +52,19 @@ def test_a_sine_bar_ends_at_a_right_angle() -> None:
         SINE_BAR.rad_per_step(1e7)
 
 
+def test_a_sine_bar_reaches_its_right_angle() -> None:
+    """The last position is the bar's own length from zero order, and stands at 90 degrees."""
+    assert float(SINE_BAR.rotation_rad(799_960.0)) == pytest.approx(-0.5 * math.pi, rel=1e-12)
+
+
+def test_a_perfect_drive_has_no_error() -> None:
+    """An amplitude of zero is a statement, not a mistake, and a position may be finer than a step."""
+    perfect = PeriodicError(name="worm", period_steps=100.0, amplitude_steps=0.0)
+    assert (perfect.slope, perfect.amplitude_nm(NM_PER_STEP)) == (0.0, 0.0)
+    assert separation_rms_nm(separation_nm=0.03, amplitude_nm=0.0, period_nm=1.0) == 0.0
+    assert perfect.share_left(fwhm_steps=8.0, spacing_steps=0.25) < 1.0
+
+
 def test_the_microstep_error_in_figures() -> None:
     """+-14 pm on a line, a local slope of 7.9 %, and so at most 2.3 pm on a pair 29 pm apart: 2 pi a/P, by
     hand."""
@@ -125,6 +138,7 @@ def test_dithered_sweeps_average_what_one_sweep_does_not() -> None:
         (lambda: RotaryDrive(steps_per_radian=0.0), r"steps_per_radian = 0\.0; allowed"),
         (lambda: SineBarDrive(steps_per_unit_sine=math.inf), "steps_per_unit_sine = inf; allowed"),
         (lambda: SineBarDrive(steps_per_unit_sine=1.0, zero_order_steps=math.nan), "zero_order_steps = nan"),
+        (lambda: RotaryDrive(steps_per_radian=1.0, zero_order_steps=math.inf), "zero_order_steps = inf"),
         (
             lambda: PeriodicError(name="w", period_steps=0.0, amplitude_steps=1.0),
             r"period_steps = 0\.0 of 'w'",
@@ -134,6 +148,8 @@ def test_dithered_sweeps_average_what_one_sweep_does_not() -> None:
             r"amplitude_steps = -1\.0 of",
         ),
         (lambda: MICROSTEPS.share_left(fwhm_steps=10.0, spacing_steps=5.0), "spacing below half the FWHM"),
+        (lambda: MICROSTEPS.share_left(fwhm_steps=10.0, spacing_steps=0.0), r"spacing_steps = 0\.0 with"),
+        (lambda: MICROSTEPS.share_left(fwhm_steps=math.inf, spacing_steps=1.0), "fwhm_steps = inf; allowed"),
         (
             lambda: separation_rms_nm(separation_nm=1.0, amplitude_nm=-1.0, period_nm=1.0),
             r"amplitude_nm = -1\.0; allowed",
@@ -141,6 +157,10 @@ def test_dithered_sweeps_average_what_one_sweep_does_not() -> None:
         (
             lambda: separation_rms_nm(separation_nm=1.0, amplitude_nm=1.0, period_nm=math.nan),
             "period_nm = nan; allowed",
+        ),
+        (
+            lambda: separation_rms_nm(separation_nm=1.0, amplitude_nm=1.0, period_nm=0.0),
+            r"period_nm = 0\.0; allowed",
         ),
     ],
 )

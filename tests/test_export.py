@@ -222,16 +222,17 @@ def test_the_plot_holds_the_summed_good_light(tmp_path: Path) -> None:
         assert file["entry/config/bench"].asstr()[()] == BENCH
 
 
-@pytest.mark.parametrize("verdict", ["single", "undecided", "pair"])
-def test_the_exclusion_curve_says_what_it_is(tmp_path: Path, verdict: str) -> None:
+@pytest.mark.parametrize("curve", [LOOK["exclusion"], []])
+def test_the_exclusion_curve_says_what_it_is(tmp_path: Path, curve: list[Any]) -> None:
+    """It is there where the look has one: a look without a line, or beside a pair, has none."""
     rows = records(26)
     kind, body = rows[-1]
-    rows[-1] = (kind, body | {"look": LOOK | {"verdict": verdict, "number": 3}})
+    rows[-1] = (kind, body | {"look": LOOK | {"exclusion": curve, "number": 3}})
     export(journal_of(tmp_path / "run.journal", rows), tmp_path / "run.h5", curve=flat)
     with h5py.File(tmp_path / "run.h5") as file:
         look = file["entry/analysis/look"]
-        assert ("exclusion" in look) == (verdict != "pair")
-        if verdict == "pair":
+        assert ("exclusion" in look) == bool(curve)
+        if not curve:
             return
         curve = look["exclusion"]
         assert (curve.attrs["confidence"], curve.attrs["look"]) == (0.95, 3)

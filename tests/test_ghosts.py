@@ -94,6 +94,40 @@ def test_ghosts_of_lamp_lines_near_a_target() -> None:
     assert closer.share == pytest.approx(4e-4)
 
 
+def test_ghosts_come_nearest_first_and_the_second_among_them() -> None:
+    """Around a line with 100 grooves to a period: +-5 nm, then +-10 nm; what stands just at the reach is
+    in."""
+    found = ghosts_near(
+        wavelength_nm=505.1,
+        reach_nm=16.0,
+        parents_nm=(500.0,),
+        order=1,
+        grooves_per_period=100.0,
+        first_order_fraction=1e-4,
+    )
+    assert [ghost.number for ghost in found] == [1, 2, -1, -2]
+    (at_home,) = ghosts_near(
+        wavelength_nm=found[0].wavelength_nm,
+        reach_nm=0.0,
+        parents_nm=(500.0,),
+        order=1,
+        grooves_per_period=100.0,
+        first_order_fraction=1e-4,
+    )
+    assert at_home == found[0]
+
+
+def test_a_perfect_ruling_and_the_worst_allowed() -> None:
+    """No error makes ghosts of no strength; a tenth of the line in the first, two grooves to a period, and a
+    wavelength below one nm are still within the law."""
+    perfect = ghosts_of(parent_nm=500.0, order=1, grooves_per_period=100.0, first_order_fraction=0.0)
+    assert [ghost.share for ghost in perfect] == [0.0] * 4
+    worst = ghosts_of(
+        parent_nm=0.5, order=1, grooves_per_period=2.0, first_order_fraction=0.1, highest_number=1
+    )
+    assert [(ghost.wavelength_nm, ghost.share) for ghost in worst] == [(0.25, 0.1), (0.75, 0.1)]
+
+
 GOOD = {"parent_nm": 500.0, "order": 1, "grooves_per_period": 720.0, "first_order_fraction": 1e-4}
 
 
@@ -103,6 +137,7 @@ GOOD = {"parent_nm": 500.0, "order": 1, "grooves_per_period": 720.0, "first_orde
         ("parent_nm", 0.0, r"parent_nm = 0\.0; allowed"),
         ("order", 0, "order = 0; allowed"),
         ("grooves_per_period", 1.0, r"grooves_per_period = 1\.0; allowed: 2 or more"),
+        ("grooves_per_period", math.inf, "grooves_per_period = inf; allowed: 2 or more, finite"),
         ("first_order_fraction", 0.2, r"first_order_fraction = 0\.2; allowed: 0 to 0\.1 in order 1"),
         ("first_order_fraction", math.nan, "first_order_fraction = nan; allowed"),
         ("order", 40, r"first_order_fraction = 0\.0001; allowed: 0 to 6\.25e-05 in order 40"),
@@ -114,11 +149,12 @@ def test_what_makes_no_sense(field: str, value: float, message: str) -> None:
         ghosts_of(**(GOOD | {field: value}))  # type: ignore[arg-type]
 
 
-def test_a_reach_is_not_negative() -> None:
-    with pytest.raises(ValueError, match=r"reach_nm = -0\.1; allowed"):
+@pytest.mark.parametrize("reach_nm", [-0.1, math.inf])
+def test_a_reach_is_neither_negative_nor_endless(reach_nm: float) -> None:
+    with pytest.raises(ValueError, match=f"reach_nm = {reach_nm}; allowed"):
         ghosts_near(
             wavelength_nm=500.0,
-            reach_nm=-0.1,
+            reach_nm=reach_nm,
             parents_nm=(),
             order=1,
             grooves_per_period=720.0,

@@ -99,6 +99,26 @@ def test_resolving_power_needed(one_nm: float, two_nm: float, needed: float) -> 
     assert found == pytest.approx(needed, rel=2.5e-3, abs=0.7)
 
 
+def test_levels_that_do_not_split_are_populated_alike() -> None:
+    """No splitting is a splitting too: zeta is 0, and the populations differ by the weights alone."""
+    assert spin_orbit(splitting_per_cm=0.0, orbital_l=2).zeta_per_cm == 0.0
+    assert boltzmann_factor(splitting_per_cm=0.0, temperature_k=0.5) == 1.0
+
+
+def test_an_upper_level_of_j_0_has_one_state() -> None:
+    """Lines of equal A from J = 0 and J = 1 go as the weights 1 and 3."""
+    assert thin_photon_ratio(a_1_per_s=1e7, j_1=0.0, a_2_per_s=1e7, j_2=1.0) == pytest.approx(1.0 / 3.0)
+
+
+def test_muonium_is_an_isotope_too() -> None:
+    """A nucleus far below one u: the antimuon, 206.768 electron masses (CODATA), against the proton, by
+    hand lambda goes as 1 + m_e/M."""
+    muon_u, proton_u = 206.768283 * 5.4857990907e-4, 1.007276466621
+    shift_nm = normal_mass_shift_nm(wavelength_vacuum_nm=656.0, lighter_u=muon_u, heavier_u=proton_u)
+    by_hand_nm = 656.0 * (1.0 - (1.0 + 1.0 / 1836.152673) / (1.0 + 1.0 / 206.768283))
+    assert shift_nm == pytest.approx(by_hand_nm, rel=1e-7)
+
+
 def test_hydrogen_and_deuterium() -> None:
     """H-alpha and D-alpha are 0.178576 nm apart, gross structure in vacuum (computed from CODATA constants).
 
@@ -118,7 +138,16 @@ def test_hydrogen_and_deuterium() -> None:
     [
         (lambda: spin_orbit(splitting_per_cm=1.0, orbital_l=0), "orbital_l = 0; allowed: 1 or more"),
         (lambda: spin_orbit(splitting_per_cm=-1.0, orbital_l=1), r"splitting_per_cm = -1\.0; allowed"),
+        (
+            lambda: spin_orbit(splitting_per_cm=1.0, splitting_u_per_cm=-0.1, orbital_l=1),
+            r"splitting_u_per_cm = -0\.1; allowed",
+        ),
         (lambda: level_splitting_per_cm(zeta_per_cm=math.nan, orbital_l=1), "zeta_per_cm = nan"),
+        (lambda: level_splitting_per_cm(zeta_per_cm=1.0, orbital_l=0), "orbital_l = 0; allowed"),
+        (
+            lambda: boltzmann_factor(splitting_per_cm=-1.0, temperature_k=300.0),
+            r"splitting_per_cm = -1\.0; allowed",
+        ),
         (lambda: boltzmann_factor(splitting_per_cm=1.0, temperature_k=0.0), r"temperature_k = 0\.0; allowed"),
         (
             lambda: thin_photon_ratio(a_1_per_s=0.0, j_1=0.5, a_2_per_s=1.0, j_2=0.5),
@@ -131,6 +160,14 @@ def test_hydrogen_and_deuterium() -> None:
         (
             lambda: normal_mass_shift_nm(wavelength_vacuum_nm=1.0, lighter_u=2.0, heavier_u=1.0),
             "the lighter first",
+        ),
+        (
+            lambda: normal_mass_shift_nm(wavelength_vacuum_nm=1.0, lighter_u=0.0, heavier_u=1.0),
+            r"lighter_u = 0\.0, .*positive",
+        ),
+        (
+            lambda: normal_mass_shift_nm(wavelength_vacuum_nm=1.0, lighter_u=1.0, heavier_u=math.inf),
+            "heavier_u = inf; allowed: positive, finite",
         ),
         (
             lambda: normal_mass_shift_nm(wavelength_vacuum_nm=0.0, lighter_u=1.0, heavier_u=2.0),

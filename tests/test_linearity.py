@@ -314,6 +314,24 @@ def test_currents_from_two_run_files(tmp_path: Path) -> None:
     assert "shot_noise_c = " in made["sentences"][-1]
 
 
+def test_runs_too_faint_to_be_compared_are_told_so_and_one_run_twice_is_refused(tmp_path: Path) -> None:
+    """The demo's own faint lines say nothing of a dead time."""
+    quick = TARGET.replace("time_s = 60.0", "time_s = 40.0").replace("dwell_s = 0.05", "dwell_s = 0.2")
+    files = [
+        cellar.run(
+            tmp_path / name,
+            bench=cellar.bench_file(tmp_path, changes=changes),
+            target=cellar.target_file(tmp_path, quick),
+            seed=seed,
+        ).file
+        for name, changes, seed in (("plain", [], 1), ("grey", [ATTENUATOR], 2))
+    ]
+    with pytest.raises(DataError, match="too faint or too short"):
+        linearity(*files)
+    with pytest.raises(DataError, match="are the same run"):
+        linearity(files[0], files[0])
+
+
 def test_runs_that_do_not_belong_together_are_refused(tmp_path: Path) -> None:
     """Another dead time in the bench file, or another line: no comparison, and the message says which."""
     quick = TARGET.replace("time_s = 60.0", "time_s = 15.0")
@@ -333,3 +351,11 @@ def test_runs_that_do_not_belong_together_are_refused(tmp_path: Path) -> None:
     away = cellar.run(tmp_path / "away", bench=benches["one"], target=elsewhere).file
     with pytest.raises(DataError, match="0 positions of the drive in common"):
         linearity(files["one"], away)
+    raised = cellar.run(
+        tmp_path / "raised",
+        bench=benches["one"],
+        target=cellar.target_file(tmp_path, quick),
+        confirmed={"items": [{"key": "high_voltage_v", "value": 950.0, "words": "high voltage"}]},
+    ).file
+    with pytest.raises(DataError, match=r"different high_voltage_v \(None and 950\.0\)"):
+        linearity(files["one"], raised)

@@ -8,9 +8,10 @@ import numpy as np
 import pytest
 from emulated import CENTRE_NM, FWHM_NM, SLIT_NM, Lamp, line, night, question
 
-from analysis.budget import drive_uncertainty_nm
+from analysis.budget import drive_uncertainty_nm, separation_budget
 from analysis.counting import Counts, FloatArray
 from analysis.evidence import between
+from analysis.fit import FitResult
 from analysis.model import FeatureModel, vector
 from analysis.question import Feature
 from analysis.recorded import guess_feature, weigh_once
@@ -301,6 +302,50 @@ def test_periodic_errors_of_the_drive() -> None:
     )
     with pytest.raises(ValueError, match="period > 0"):
         drive_uncertainty_nm(replace(FEATURE, periodic_errors_nm=((1e-4, 0.0),)), 0.02)
+
+
+def expected(feature: Feature, deviation: float | None, **modes: float) -> Counts:
+    """Counts, or readings of one standard deviation, exactly as expected of a pair 0.026 nm apart."""
+    x = CENTRE_NM + np.linspace(-0.08, 0.08, 161)
+    sigma = None if deviation is None else np.full(x.size, deviation)
+    dark = (200.0, 40.0) if deviation is None else (0.0, 0.0)
+    group = np.zeros(x.size, dtype=np.int64)
+    blank = Counts(x, np.ones(x.size), np.full(x.size, 2.0), group, sigma, *dark)
+    model = FeatureModel(blank, feature, 2)
+    assert model.background is not None
+    values = {name: VALUES[name] for name in ("gamma_nm", "sigma_nm", "dark_per_s")}
+    values |= {"area": 40.0, "centre_nm": CENTRE_NM, "ratio": 0.5, "separation_nm": 0.026}
+    values |= dict.fromkeys(model.background.names, 50.0) | modes
+    known = {name: value for name, value in values.items() if name in model.names}
+    return replace(blank, counts=model.evaluate(vector(model, known))[0][: x.size])
+
+
+@pytest.mark.parametrize("deviation", [None, 30.0])
+def test_a_budget_is_what_fits_with_the_shape_known_and_with_a_wrong_one_say(deviation: float | None) -> None:
+    """Counting: the deviation of a fit without shape modes. Shape: how far that fit's separation moves when
+    the light has an allowance of skewness, or of kurtosis; from fits to a tenth of it (linear response)."""
+    bent = replace(FEATURE, known_lines_nm=())
+    straight = replace(bent, shape_allowance=0.0)
+
+    def fitted(feature: Feature, **modes: float) -> tuple[FeatureModel, FitResult]:
+        model = FeatureModel(expected(bent, deviation, **modes), feature, 2)
+        return model, fit_pair(model, fit_single(model))
+
+    model, made = fitted(bent)
+    budget = separation_budget(model, made, scale_relative_uncertainty=2e-5)
+    _, known = fitted(straight)
+    assert made.value("separation_nm") == pytest.approx(0.026, rel=1e-6)
+    assert budget.statistics_nm == pytest.approx(known.deviation("separation_nm"), rel=1e-4)
+    tenth = 0.1 * bent.shape_allowance
+    moved = [
+        10.0 * (fitted(straight, **{mode: tenth})[1].value("separation_nm") - 0.026)
+        for mode in ("skewness", "kurtosis")
+    ]
+    assert budget.shape_nm == pytest.approx(float(np.hypot(*moved)), rel=0.01)
+    assert budget.scale_nm == pytest.approx(2e-5 * 0.026)
+    assert budget.drive_nm == 0.0
+    scattered = separation_budget(model, made, scale_relative_uncertainty=2e-5, spread=1.5)
+    assert scattered == replace(budget, statistics_nm=1.5 * budget.statistics_nm)
 
 
 @pytest.mark.parametrize(

@@ -69,6 +69,8 @@ def test_a_long_pass_filter_clears_the_first_order() -> None:
     (second,) = overlaps(wavelength_nm=901.0, order=1, band=long_pass)
     assert (second.order, second.wavelength_nm) == (2, 450.5)
     assert passes(long_pass, 450.0)
+    assert passes(long_pass, 1100.0)
+    assert passes(FilterBand(name="short-pass", shortest_nm=0.0, longest_nm=400.0), 1.0)
     assert not passes(long_pass, 449.999)
     assert passes(None, 1.0)
 
@@ -77,6 +79,9 @@ def test_a_filter_is_demanded_where_the_detector_sees_another_order() -> None:
     """In order 1 from twice the shortest wavelength seen: 370 nm with a detector that begins at 185 nm."""
     assert not filter_is_demanded(wavelength_nm=369.9, order=1)
     assert filter_is_demanded(wavelength_nm=370.1, order=1)
+    # and silicon sees the first order of a line in the second up to 1100 nm
+    assert [o.order for o in overlaps(wavelength_nm=550.0, order=2, shortest_nm=500.0)] == [1]
+    assert not filter_is_demanded(wavelength_nm=551.0, order=2, shortest_nm=500.0)
     # 313 nm in order 2 stands on 626 nm in order 1, and on 209 nm in order 3
     assert filter_is_demanded(wavelength_nm=313.0, order=2)
     assert filter_is_demanded(wavelength_nm=313.0, order=2, longest_nm=600.0)
@@ -98,11 +103,25 @@ def test_lamp_lines_of_other_orders_near_a_target() -> None:
     assert overlaps_near(wavelength_nm=546.0, reach_nm=1.0, order=1, lines_nm=(546.074,)) == ()
 
 
+def test_lamp_lines_of_other_orders_on_the_other_side_of_zero_order() -> None:
+    """In order -2 mercury 546.074 nm of order -1 stands at half its wavelength, and the orders keep their
+    sign; nothing comes from zero order, however wide the reach."""
+    (only,) = overlaps_near(wavelength_nm=273.0, reach_nm=0.5, order=-2, lines_nm=(546.074,))
+    assert (only.order, only.wavelength_nm, only.apparent_nm) == (-1, 546.074, 273.037)
+    wide = overlaps_near(wavelength_nm=500.0, reach_nm=600.0, order=1, lines_nm=(400.0,))
+    assert [(o.order, o.apparent_nm) for o in wide] == [(2, 800.0)]
+
+
 @pytest.mark.parametrize(
     ("call", "message"),
     [
         (lambda: overlaps(wavelength_nm=-1.0, order=1), r"wavelength_nm = -1\.0; allowed: positive"),
+        (lambda: overlaps(wavelength_nm=0.0, order=1), r"wavelength_nm = 0\.0; allowed: positive"),
         (lambda: overlaps(wavelength_nm=1.0, order=0), "order = 0; allowed"),
+        (
+            lambda: overlaps(wavelength_nm=1.0, order=1, longest_nm=math.inf),
+            "longest_nm = inf; allowed: positive, finite",
+        ),
         (
             lambda: overlaps(wavelength_nm=1.0, order=1, shortest_nm=9.0, longest_nm=8.0),
             "the shorter one first",
@@ -111,6 +130,14 @@ def test_lamp_lines_of_other_orders_near_a_target() -> None:
         (
             lambda: overlaps_near(wavelength_nm=1.0, reach_nm=-1.0, order=1, lines_nm=()),
             r"reach_nm = -1\.0; allowed",
+        ),
+        (
+            lambda: overlaps_near(wavelength_nm=1.0, reach_nm=math.inf, order=1, lines_nm=()),
+            "reach_nm = inf; allowed",
+        ),
+        (
+            lambda: overlaps_near(wavelength_nm=1.0, reach_nm=0.1, order=1, lines_nm=(-5.0,)),
+            r"wavelength_nm = -5\.0; allowed",
         ),
         (lambda: FilterBand(name="uv", shortest_nm=400.0, longest_nm=300.0), "'uv': shortest_nm = 400"),
     ],

@@ -65,6 +65,19 @@ def test_events_have_their_mean_as_variance(rate_per_s: float) -> None:
     assert abs(current_a - rate_per_s * 1.6e-13) < 4.0 * mean_u * law.shot_noise_c / GATE_S, seed
     ratio_u = math.sqrt(2.0 / readings) * 1.1  # the kurtosis of a few dozen events adds to a Gaussian's
     assert float(events.var()) / float(events.mean()) == pytest.approx(1.0, abs=4.0 * ratio_u), seed
+    # the same law in recorded counts: their standard deviation, and their rate back from that of events
+    deviation = law.deviation(np.array([counts.mean()]), np.array([GATE_S]))[0]
+    assert deviation == pytest.approx(counts.std(), rel=4.0 * 0.5 * ratio_u), seed
+    recorded_per_s = law.recorded_per_s(np.array([events.mean() / GATE_S]))[0]
+    assert recorded_per_s == pytest.approx(counts.mean() / GATE_S, rel=1e-9, abs=1e-6)
+
+
+def test_no_current_through_a_noiseless_meter_is_still_not_known_better_than_one_event() -> None:
+    """Without read noise the deviation is that of one event at least: no reading weighs infinitely much."""
+    law = AnalogueLaw(charge_unit_c=1e-15, read_noise_a=0.0, shot_noise_c=2e-13)
+    assert law.pedestal_per_s == 0.0
+    made = law.deviation(np.array([-300.0, 0.0, 800.0]), np.full(3, GATE_S))
+    assert made == pytest.approx([200.0, 200.0, 400.0])
 
 
 def test_sums_of_events_are_events_of_the_sum() -> None:
@@ -156,9 +169,12 @@ def test_the_instruments_own_flags_are_kept() -> None:
     assert check_reading(2e-6, highest_current_a=1e-6, flags=("late",)) == ("late", "saturated")
 
 
+NO_NUMBERS = (9.9e37, 9.9e36, math.nan, -math.inf)
+
+
 def test_nonsense_is_recorded_as_no_charge() -> None:
     """A point's counts are whole numbers of 64 bits whatever the instrument says."""
-    assert [recorded_counts(a, 1.0, charge_unit_c=1e-16) for a in (9.9e37, math.nan, -math.inf)] == [0, 0, 0]
+    assert [recorded_counts(a, 1.0, charge_unit_c=1e-16) for a in NO_NUMBERS] == [0] * len(NO_NUMBERS)
     assert recorded_counts(-2.6e-15, 0.5, charge_unit_c=1e-16) == -13
 
 
@@ -193,6 +209,58 @@ def test_dispersion_is_what_the_reference_adds(signal: float, reference_mean: fl
     assert ratio == pytest.approx(1.0, abs=4.0 * math.sqrt(2.5 / gates)), seed
     plain = counts.var() / counts.mean()
     assert plain > 3.0 if signal > 100.0 else plain > 1.5, "without a reference the lamp would show"
+
+
+@pytest.mark.parametrize("gate_s", [0.1, 100.0])
+def test_each_position_is_weighed_by_its_own_neighbours(gate_s: float) -> None:
+    """Where neither sees a background phi is 1 + n/M, n and M those of the positions on both sides: by hand
+    (Przyborowski and Wilenski 1940), for rates above and below one per s."""
+    counts, seen = np.array([10.0, 40.0, 90.0, 160.0]), np.array([100.0, 250.0, 400.0, 850.0])
+    made = reduce(sums_of(counts, seen, gate_s=gate_s), detector=PULSES, reference=ReferenceLaw(0.0, 0.0))
+    by_hand = [1.0 + 40.0 / 250.0, 1.0 + 100.0 / 500.0, 1.0 + 200.0 / 1100.0, 1.0 + 90.0 / 400.0]
+    assert made.counts.dispersion == pytest.approx(by_hand, rel=1e-12)
+
+
+def test_the_dark_that_the_dispersion_knows_of_is_a_rate() -> None:
+    """Half a second of dark tells as much of its rate as ten times the counts in ten times the gate."""
+    counts, seen = np.array([60.0, 90.0, 80.0]), np.array([500.0, 600.0, 550.0])
+    law = ReferenceLaw(0.0, 0.0)
+    short, long = (
+        reduce(
+            sums_of(counts, seen, dark_counts=20 * k, dark_gate_s=0.5 * k), detector=PULSES, reference=law
+        ).counts.dispersion
+        for k in (1, 10)
+    )
+    assert short is not None
+    assert short == pytest.approx(long, rel=1e-12)
+    # 40 per s of dark are 4 of the 90 counts beside the first: phi = 1 + 86^2/(90 M)
+    assert short[0] == pytest.approx(1.0 + 86.0**2 / (90.0 * 600.0), rel=1e-12)
+
+
+def test_a_position_not_visited_yet_has_no_say() -> None:
+    """Zero counts in zero time: exposure and dispersion 1, and the others as if it were not there."""
+    counts, seen = np.array([50.0, 0.0, 70.0]), np.array([900.0, 0.0, 1100.0])
+    sums = sums_of(counts, seen)
+    sums.gate_s[1] = 0.0
+    made = reduce(sums, detector=PULSES, reference=ReferenceLaw(0.0, 0.0))
+    assert made.flags == ()
+    assert made.counts.exposure == pytest.approx([0.9, 1.0, 1.1])
+    assert made.counts.dispersion is not None
+    assert made.counts.dispersion[1] == 1.0
+    assert (made.counts.dispersion[[0, 2]] > 1.0).all()
+
+
+def test_a_faint_reference_is_a_reference() -> None:
+    """One that sees the lamp half a time a second serves, if the gates are long; one not yet asked does
+    not."""
+    law = ReferenceLaw(0.0, 0.0)
+    sums = sums_of(np.array([50.0, 70.0]), np.array([40.0, 60.0]), gate_s=100.0)
+    assert reference_level_per_s(sums, law) == pytest.approx(0.5)
+    made = reduce(sums, detector=PULSES, reference=law)
+    assert made.flags == ()
+    assert made.counts.exposure == pytest.approx([0.8, 1.2])
+    with pytest.raises(ValueError, match="saw no lamp"):
+        reference_level_per_s(sums_of(np.zeros(2), np.zeros(2), gate_s=0.0), law)
 
 
 def test_a_reference_near_its_limit_is_noisier_than_its_counts_look() -> None:
@@ -329,6 +397,21 @@ def test_what_the_reference_cannot_vouch_for_is_left_out() -> None:
     assert made.counts.counts.tolist() == [100.0, 0.0, 0.0, 0.0]
     assert made.counts.exposure is not None
     assert made.counts.exposure[0] == pytest.approx(1.0)
+
+
+def test_a_counter_at_its_limit_is_still_corrected() -> None:
+    """The limit of the load itself, 0.3, is allowed: as everywhere else (`refuse_overload`)."""
+    sums = sums_of(np.array([300.0, 301.0]), None, gate_s=1.0)
+    made = reduce(sums, detector=CounterLaw(1e-3))
+    assert made.counts.counts.tolist() == [300.0, 0.0]
+    assert made.flags == ("dead-time",)
+
+
+def test_what_is_not_stated_is_nothing() -> None:
+    """No dark, no uncertainty of the dead time, unless somebody says so."""
+    plain = sums_of(np.array([5.0, 7.0]), None)
+    made = reduce(plain, detector=CounterLaw(30e-9)).counts
+    assert (made.dark_counts, made.dark_gate_s, made.dead_time_u_s) == (0.0, 0.0, 0.0)
 
 
 def test_a_bench_without_reference_reduces_to_plain_counts() -> None:

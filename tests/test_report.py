@@ -177,6 +177,15 @@ def test_a_single_line_shows_what_it_excludes(night: Night) -> None:
     assert "What a second line is excluded to" not in night.page(night.pair).text
 
 
+def test_nothing_is_excluded_beside_one_line_that_does_not_hold(night: Night) -> None:
+    """Undecided between a pair and a self-reversed line, say: the curve would exclude what is seen."""
+    for run, has_curve in ((night.pair, False), (night.single, True)):
+        look = gather(run.file).look
+        assert look is not None
+        assert look["exclusion"]
+        assert report_tables.excludes({**look, "verdict": "undecided"}) is has_curve
+
+
 def test_cautions_and_the_way_back_stand_on_every_run(night: Night) -> None:
     for run in (night.pair, night.single):
         text = night.page(run).text
@@ -204,7 +213,7 @@ def test_a_run_that_broke_off_has_a_page_that_says_so(night: Night, tmp_path: Pa
 
 
 def test_a_run_without_a_look_has_a_page(tmp_path: Path) -> None:
-    stop = [(40.0, lambda runner: runner.wish("stop", reason="stopped-by-user", source="terminal"))]
+    stop = [(30.0, lambda runner: runner.wish("stop", reason="stopped-by-user", source="terminal"))]
     run = cellar.run(tmp_path, wishes=stop)
     assert run.summary["flags"] == ["too-few-points"]
     report([run.file], tmp_path / "out", with_csv=True)
@@ -430,6 +439,11 @@ def test_a_run_identity_that_is_a_path_goes_nowhere(night: Night, tmp_path: Path
     done = report([tmp_path / "run.h5"], tmp_path / "a" / "b" / "out", with_csv=True)
     assert [("cannot be part of a file name" in problem) for problem in done.problems] == [True]
     assert done.written == []
+
+
+def test_a_file_is_no_folder(brief: Path, tmp_path: Path) -> None:
+    with pytest.raises(DataError, match="is a file; give the name of a folder"):
+        report([brief], brief, with_csv=False)
 
 
 def test_a_folder_that_cannot_be_made_is_named(brief: Path, tmp_path: Path) -> None:

@@ -61,7 +61,7 @@ SYNTAX_MISTAKES: list[tuple[str, bytes, list[str]]] = [
         ["line 1, column 8: ", 'text stands in quotes: name = "Hg pair"'],
     ),
     ("no value", b"name =\n", ["line 1, column 7: ", "invalid value"]),
-    ("open quote", b'name = "Hg\n', ["line 1, column 11: "]),
+    ("open quote", b'name = "Hg\n', ["line 1, column 11: ", "a closing quote is missing"]),
     ("open list at the end", b"a = [1,", ["end of file: "]),
     ("empty", b"", ["is empty; a settings file begins with 'format = 1'"]),
     ("comments only", b"# nothing yet\n", ["is empty"]),
@@ -90,6 +90,16 @@ def test_the_samples_themselves_are_right() -> None:
     assert mounts == {"table", "plane", "concave", "littrow"}
     assert read_bench(BY_HAND, "b").by_hand.lamp == "mercury"
     assert read_target(TARGET, "t").wavelength_nm == 313.155
+
+
+def test_a_file_of_another_kind_is_told_as_that_alone() -> None:
+    night = 'format = 1\nname = "N"\n[[runs]]\ntarget = "t.toml"\n'
+    for reader, text, wanted in (
+        (read_target, BENCH, "is a bench file; a target file is wanted here"),
+        (read_bench, TARGET, "is a target file; a bench file is wanted here"),
+        (read_bench, night, "is a night file; a bench file is wanted here"),
+    ):
+        assert problems_of(reader, text) == [wanted]
 
 
 @pytest.mark.parametrize(("kind", "row"), MISTAKES)

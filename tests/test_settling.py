@@ -2,14 +2,17 @@
 
 from __future__ import annotations
 
+import json
 from pathlib import Path
 
 import pytest
-from cellar import QUICK_TARGET, START_UTC_NS, bench_file, run, target_file
+from cellar import QUICK_TARGET, START_UTC_NS, bench_file, fault, run, target_file
+from commandline import gratingd
 from machine_bench import GATE_NS, Play, plan, replay, state_of, wish
 
 from daq.machine import NARROW, NARROW_IN_A_ROW, StartPoint
 from daq.records import Kind, StopReason, utc_stamp
+from daq.runfile import read_run
 from daq.tally import KEPT_UNSETTLED, SETTLING
 
 
@@ -28,6 +31,7 @@ def test_the_dark_is_repeated_until_it_has_settled_and_only_the_settled_part_is_
     assert counts[:4] == [410, 210, 110, 60]
     assert len(counts) > 8
     assert play.machine.tally.dark_is_settled
+    assert not play.machine.dark_is_unsettled
     assert play.machine.light_ns == 0
     snapshot = play.machine.tally.snapshot()
     dwells = snapshot.dark_gate_ns // (2 * GATE_NS)
@@ -42,6 +46,7 @@ def test_a_dark_that_does_not_settle_in_its_time_is_taken_as_it_last_was() -> No
     assert not play.machine.tally.dark_is_settled
     assert len(counts) == 4
     assert play.machine.tally.snapshot().dark_counts == sum(counts[-KEPT_UNSETTLED:])
+    assert play.machine.dark_is_unsettled, "and the summary says so"
     play.finish()
     assert play.outstanding.sweep == 0
 
@@ -91,6 +96,41 @@ def test_the_settled_darks_of_a_run_are_those_of_its_file(tmp_path: Path) -> Non
         assert int(data["dark_gate_ns"][()]) == outcome.machine.tally.snapshot().dark_gate_ns
         sweeps = file["entry/scan/sweep"][:]
     assert (sweeps[:4] == SETTLING).all()
+
+
+def test_after_too_much_light_the_next_run_waits_for_the_dark_and_says_if_it_has_not_settled(
+    tmp_path: Path,
+) -> None:
+    """A night of two: the first trips the counter, whose dark is raised sixfold and decays for minutes."""
+    bench_file(tmp_path, faults=fault("detector", "gate", 20, "over-light"))
+    for number in (1, 2):
+        target_file(tmp_path, QUICK_TARGET.replace("Quick", f"Quick {number}"), f"{number}.toml")
+    night = tmp_path / "night.toml"
+    runs = "".join(f'[[runs]]\ntarget = "{number}.toml"\n' for number in (1, 2))
+    night.write_text(f'format = 1\nname = "Two"\n{runs}', encoding="utf-8")
+    done = gratingd("night", "bench.toml", night, "--confirm", "--json", cwd=tmp_path)
+    first, second = json.loads(done.stdout)["runs"]
+    assert first["stop_reason"] == "over-light"
+    records = list(read_run(Path(second["file"])).records())
+    darks = [r.body for r in records if r.kind == Kind.POINT and r.body["sweep"] == SETTLING]
+    # half of the 400 s that the run has, in dwells of 1 s; at once it would have been content with four
+    assert len(darks) > 100
+    assert ("dark-unsettled" in second["flags"]) == (second["points"] > len(darks))
+
+
+def test_a_run_that_ends_before_the_line_does_not_blame_the_lamp(tmp_path: Path) -> None:
+    """Enough positions to be weighed, but all of them on the short side of the line."""
+    target = target_file(tmp_path, QUICK_TARGET.replace("time_s = 400.0", "time_s = 60.0"))
+    outcome = run(
+        tmp_path,
+        target=target,
+        wishes=[(33.0, lambda runner: runner.wish("stop", reason="stopped-by-user", source="test"))],
+    )
+    light = [body for body in outcome.of_kind(Kind.POINT) if body["light"]]
+    assert 12 <= len(light) < 18
+    assert "line-not-reached" in outcome.summary["flags"]
+    assert "no-line" not in outcome.summary["flags"]
+    assert outcome.summary["verdict"] == "undecided"
 
 
 def test_lines_narrower_than_the_slits_stop_the_run_before_the_night_is_spent() -> None:

@@ -71,6 +71,9 @@ def test_a_single_line_is_said_with_what_it_excludes() -> None:
 
 
 def _limit(answer: Look, fwhms: float) -> float:
+    """Nothing is excluded where one line does not hold."""
+    if not answer.exclusion:
+        return 1.0
     point = min(answer.exclusion, key=lambda p: abs(p.separation_nm - fwhms * FWHM_NM))
     return 1.0 if point.ratio_limit is None else point.ratio_limit
 
