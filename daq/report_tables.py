@@ -211,16 +211,8 @@ def looks(view: RunView) -> Table | None:
 
 
 def excludes(look: Mapping[str, Any]) -> bool:
-    """Whether a look's exclusion curve says anything.
-
-    It adds a faint second line to one line, and is meaningless without a line and where one line does not
-    describe the data: beside a pair or a self-reversed line, claimed or not yet.
-    """
-    if look["verdict"] in ("pair", "self-reversed"):
-        return False
-    rival, bound = look["log_numerator_pair"], look["bound_pair"]
-    if rival - look["log_numerator_single"] > bound:
-        return False
+    """Whether a look's exclusion curve says anything; without a line, or where one line does not hold, there
+    is none."""
     return any(row["ratio_limit"] is not None for row in look["exclusion"])
 
 

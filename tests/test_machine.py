@@ -427,3 +427,11 @@ def test_the_hands_are_asked_once_to_end_a_dwell() -> None:
     assert play.letting_go
     play.finish(2)
     assert play.machine.action is Action.SAFE
+
+
+def test_a_plan_that_asks_for_no_settling_has_no_unsettled_dark() -> None:
+    """Neither does one from before there was such a key: its sweeps begin at once, and nothing is said."""
+    play = measuring(3)
+    assert "dark_settling_ns" not in play.plan
+    assert [start.sweep for start in play.points_started] == [0] * len(play.points_started)
+    assert not play.machine.dark_is_unsettled

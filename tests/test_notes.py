@@ -119,9 +119,18 @@ def test_an_author_is_one_short_line(file: Path, author: str) -> None:
         add_note(file, "text", author=author, clock=Wall())
 
 
-def test_the_longest_text_is_taken(file: Path) -> None:
-    add_note(file, "x" * LONGEST_TEXT, author=None, clock=Wall())
-    assert len(read_notes(file)[0].text) == LONGEST_TEXT
+def test_what_is_refused_says_what_would_be_taken(file: Path) -> None:
+    """Lines and tabs are for the text, not for the author."""
+    with pytest.raises(DataError, match="plain text, line ends and tabs excepted"):
+        add_note(file, "bell \a", author=None, clock=Wall())
+    with pytest.raises(DataError, match="plain text, and a single line"):
+        add_note(file, "text", author="two\nlines", clock=Wall())
+
+
+def test_the_longest_text_and_author_are_taken(file: Path) -> None:
+    add_note(file, "x" * LONGEST_TEXT, author="y" * 200, clock=Wall())
+    (note,) = read_notes(file)
+    assert (len(note.text), note.author) == (LONGEST_TEXT, "y" * 200)
 
 
 def test_a_run_that_is_not_over_takes_no_note(measured: cellar.Outcome, tmp_path: Path) -> None:

@@ -39,7 +39,7 @@ def test_commands_and_names_in_the_text_exist() -> None:
     shown = CliRunner().invoke(gratingd, ["--help"]).output
     for command in re.findall(r"^\| `gratingd (\w+)", README, re.MULTILINE):
         assert re.search(rf"^  {command}\b", shown, re.MULTILINE), command
-    for name in ("emberlight-3", "acceptance", "hg-313-pair", "recorded-ar-750", "recorded-cd-361"):
+    for name in ("emberlight-7", "lamp-works", "hg-313-narrow", "acceptance", "recorded-cd-361"):
         assert name in README
         assert resolve(name).is_file()
     for path in re.findall(r"\]\(((?:configs|tests)/[^)]+)\)", README):

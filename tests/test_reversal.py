@@ -61,7 +61,7 @@ def ask(**kwargs: float) -> Question:
     return replace(asked, feature=replace(asked.feature, self_reversal="possible"))
 
 
-@pytest.mark.parametrize("boxes", [(0.018, 0.011), (0.018, 0.018), (0.02, 0.003)])
+@pytest.mark.parametrize("boxes", [(0.018, 0.011), (0.018, 0.018), (0.02, 0.003), (0.018, 2e-5)])
 @pytest.mark.parametrize(
     ("depth", "absorber", "shift"), [(0.0, 0.5, 0.2), (1.0, 1.0, 0.0), (3.0, 0.4, -0.3), (6.0, 0.2, 0.5)]
 )
