@@ -267,6 +267,10 @@ def _charge(bench: Bench, target: Target) -> Iterator[Finding]:
         )
 
 
+MOST_SEPARATIONS = 100.0
+"""Uncertainty of a separation from one sweep, in separations, beyond which nothing is forecast."""
+
+
 def forecast(
     bench: Bench, view: View, target: Target, stretches: Sequence[Stretch], floor_nm: float
 ) -> tuple[float, float | None] | None:
@@ -308,6 +312,8 @@ def forecast(
     if not 0.0 < variance < math.inf:
         return None
     one_nm = math.sqrt(variance) * float(scale[1])
+    if one_nm > MOST_SEPARATIONS * separation_nm:
+        return None  # the window says next to nothing about the second line
     goal_pm = target.goal.separation_uncertainty_pm
     if goal_pm is None:
         return 1e3 * one_nm, None

@@ -295,6 +295,19 @@ def test_the_companion_is_looked_for_where_the_window_has_room(window: str) -> N
     assert one["separation_u_one_sweep_pm"] == pytest.approx(wanted_pm, rel=0.01)
 
 
+def test_nothing_is_forecast_of_a_companion_outside_the_window() -> None:
+    """No time of ages is told: the companion looked for stands 60 pm outside of a window of 50 pm."""
+    away = numbers_of(
+        (),
+        [
+            ("half_width_fwhm = 5.0", "below_pm = 20.0\nabove_pm = 30.0"),
+            ("smallest_separation_pm = 25.0", "smallest_separation_pm = 90.0"),
+        ],
+    )
+    assert away.get("time_to_goal_s") is None
+    assert away.get("separation_u_one_sweep_pm") is None
+
+
 def test_one_sweep_is_forecast_without_a_goal_and_with_one_that_no_light_reaches() -> None:
     """What a sweep is worth is the light's affair; the time to a goal needs one that can be reached."""
     plain = numbers_of()

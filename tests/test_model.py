@@ -75,6 +75,8 @@ def counted(seed: int) -> Counts:
             False,
         ),
         (FEATURE, 1, True),
+        (replace(FEATURE, box_widths_nm=(SLIT_NM, 0.0)), 1, True),
+        (replace(FEATURE, box_widths_nm=(0.0, 0.0)), 1, True),
         (replace(FEATURE, pattern=PATTERN, shape_allowance=0.0), 1, True),
     ],
 )

@@ -15,6 +15,7 @@ from emulated import SLIT_NM, Lamp, night, question
 from scipy.optimize import least_squares
 from scipy.special import voigt_profile
 
+from analysis.claims import QUESTION_DEPTH, QUESTION_HUMPS, QUESTION_WIDTH, _Rivals
 from analysis.counting import FloatArray
 from analysis.curve import curve
 from analysis.line import Shape, observed_line
@@ -132,11 +133,12 @@ def test_humps_of_the_question_are_as_far_apart_as_it_asks() -> None:
     """A rival of `single` has depth >= 1.5 and width >= 0.4: maxima are 1.69 emitter widths apart or more."""
     x = np.linspace(0.0, 4.0, 40001)
     apart = []
-    for depth in np.linspace(1.5, 6.0, 19):
-        for width in np.linspace(0.4, 1.0, 13):
+    for depth in np.linspace(QUESTION_DEPTH, 6.0, 19):
+        for width in np.linspace(QUESTION_WIDTH, 1.0, 13):
             light = np.exp(-0.5 * x * x - depth * np.exp(-0.5 * (x / width) ** 2))
             apart.append(2.0 * x[np.argmax(light)])
-    assert min(apart) == pytest.approx(1.69, abs=0.01)
+    assert (QUESTION_DEPTH, QUESTION_WIDTH) == (1.5, 0.4)
+    assert min(apart) == pytest.approx(QUESTION_HUMPS, abs=0.01)
 
 
 def test_a_wide_dip_is_self_reversed() -> None:
@@ -199,6 +201,20 @@ def test_a_pair_stays_a_pair() -> None:
         )
         verdict, flags = close[-1].verdict, close[-1].flags
         assert verdict == "pair" or (verdict == "undecided" and "self-reversed-or-pair" in flags), seed
+
+
+def test_a_reversed_rival_of_the_question_keeps_to_its_bounds() -> None:
+    """Against `single` only a dip the question asks about counts; against `pair` any, also unresolved."""
+    lamp = Lamp(61, peak_per_s=3000.0)
+    for _ in range(4):
+        lamp.sweep()
+    rivals = _Rivals(lamp.counts(), ask())
+    free, asked = rivals.self_reversed(), rivals.self_reversed(is_of_question=True)
+    assert asked.best.value("reversal_depth") >= QUESTION_DEPTH
+    assert asked.best.value("absorber_width") >= QUESTION_WIDTH
+    assert rivals.is_of_question(asked)
+    assert not rivals.is_of_question(free)
+    assert asked.log_density < free.log_density - 3.0, "a true single line has no such dip"
 
 
 def test_a_single_line_stays_single() -> None:

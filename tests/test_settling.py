@@ -173,8 +173,11 @@ def test_a_run_that_ends_before_the_line_does_not_blame_the_lamp(tmp_path: Path)
     assert outcome.summary["verdict"] == "undecided"
 
 
-def test_lines_narrower_than_the_slits_stop_the_run_before_the_night_is_spent() -> None:
-    """Not at the first look that says so, but when several in a row do."""
+@pytest.mark.parametrize(("wide_at", "looks"), [(None, 3), (1, 5), (2, 6)])
+def test_lines_narrower_than_the_slits_stop_the_run_before_the_night_is_spent(
+    wide_at: int | None, looks: int
+) -> None:
+    """Not at the first look that says so, but when three in a row do."""
     play = Play()
     asked = 0
     while not play.machine.ended and asked < 20:
@@ -182,13 +185,13 @@ def test_lines_narrower_than_the_slits_stop_the_run_before_the_night_is_spent() 
         if play.looks_asked:
             request = play.looks_asked.pop(0)
             play.looks_answered.add(request.horizon)
-            flags = [] if asked == 1 else [NARROW]
+            flags = [] if asked == wide_at else [NARROW]
             asked += 1
             look = {"goal_reached": False, "number": asked, "flags": flags}
             play.record(Kind.LOOK, horizon=request.horizon, look=look)
     assert play.machine.stop is StopReason.NOT_AS_STATED
     assert NARROW_IN_A_ROW == 3
-    assert asked == 5
+    assert asked == looks
 
 
 def test_slits_set_narrower_than_stated_are_found_out(tmp_path: Path) -> None:
