@@ -84,8 +84,13 @@ def open_run(path: Path) -> h5py.File:
     try:
         file = h5py.File(path, "r")
     except OSError as error:
-        if _starts_like_hdf5(path):
+        if _starts_with(path, b"\x89HDF\r\n\x1a\n"):
             _raise_damaged(path, error)
+        if _starts_with(path, b"SQLite format 3\0"):
+            raise DataError(
+                f"{path}: is a journal; its run file (.h5) is wanted. If there is none yet: "
+                f"gratingd recover {path.parent}"
+            ) from error
         raise DataError(f"{path}: is not an HDF5 file; a run file made by gratingd is wanted") from error
     try:
         if file.attrs.get("creator") != "gratingd" or "entry/config/format" not in file:
@@ -144,10 +149,10 @@ def _bits(values: NDArray[Any], name: str) -> bytes:
     return (np.where(np.isnan(values), np.nan, values) if name in AMBIENT else values).tobytes()
 
 
-def _starts_like_hdf5(path: Path) -> bool:
+def _starts_with(path: Path, signature: bytes) -> bool:
     try:
         with path.open("rb") as stream:
-            return stream.read(8) == b"\x89HDF\r\n\x1a\n"
+            return stream.read(len(signature)) == signature
     except OSError:
         return False
 

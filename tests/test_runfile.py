@@ -46,6 +46,12 @@ def run(tmp_path: Path) -> Path:
     return tmp_path / "run.h5"
 
 
+def test_a_journal_in_place_of_its_file_is_told(run: Path) -> None:
+    """They lie side by side and have one name but for the ending."""
+    with pytest.raises(DataError, match=r"is a journal; its run file \(.h5\) is wanted"):
+        read_run(run.with_suffix(".journal"))
+
+
 def test_a_run_read_back_is_its_journal(run: Path) -> None:
     data = read_run(run)
     journal = list(read_journal(run.with_suffix(".journal")))
