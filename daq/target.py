@@ -33,6 +33,16 @@ def _one_wavelength(table: _Placed) -> Iterator[tuple[str, str]]:
         yield "wavelength_vacuum_nm", "give either wavelength_air_nm or wavelength_vacuum_nm, not both"
 
 
+def _medium(table: _Placed) -> Literal["air", "vacuum"]:
+    return "vacuum" if table.wavelength_air_nm is None else "air"
+
+
+def _wavelength_nm(table: _Placed) -> float:
+    found = table.wavelength_air_nm or table.wavelength_vacuum_nm
+    assert found is not None, "the model's own checks see to it"
+    return found
+
+
 class Window(StrictModel):
     """`[window]`: how far around the expected place the sweeps reach."""
 
@@ -81,14 +91,12 @@ class PlacedWindow(Window):
 
     @property
     def medium(self) -> Literal["air", "vacuum"]:
-        return "vacuum" if self.wavelength_air_nm is None else "air"
+        return _medium(self)
 
     @property
     def wavelength_nm(self) -> float:
         """Where the stretch is centred, in `medium`."""
-        found = self.wavelength_air_nm or self.wavelength_vacuum_nm
-        assert found is not None, "the model's own checks see to it"
-        return found
+        return _wavelength_nm(self)
 
 
 class Component(StrictModel):
@@ -298,14 +306,12 @@ class Target(StrictModel):
 
     @property
     def medium(self) -> Literal["air", "vacuum"]:
-        return "vacuum" if self.wavelength_air_nm is None else "air"
+        return _medium(self)
 
     @property
     def wavelength_nm(self) -> float:
         """Expected place of the main line, in `medium`."""
-        found = self.wavelength_air_nm or self.wavelength_vacuum_nm
-        assert found is not None, "the model's own checks see to it"
-        return found
+        return _wavelength_nm(self)
 
     @property
     def known_lines_nm(self) -> tuple[float, ...]:
